@@ -1,0 +1,15 @@
+"""What floor 1 raises. A message says what came, what was wanted and what to do; it may hold outside text, raw."""
+
+__all__ = ["BridgeIOError", "FileError", "LinkError"]
+
+
+class BridgeIOError(Exception):
+    """Base of all errors raised by the bridgeio package."""
+
+
+class LinkError(BridgeIOError):
+    """A port or link could not be opened, or was lost. The command line leaves with exit code 4."""
+
+
+class FileError(BridgeIOError):
+    """A file is missing, unreadable or wrong. The command line leaves with exit code 3."""

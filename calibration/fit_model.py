@@ -1,0 +1,244 @@
+"""The model of a bench: parameters of one bridge and its loads, and what every step should then have counted.
+
+One rule: the forward detector supplies the power of a step. A wattmeter's word is compared with it, within the
+wattmeter's scatter; its common error cannot be seen and stays outside the fit.
+
+Forward counts F(k_f |1 + c G| sqrt P), reflected counts R(k_r |G + d| sqrt P); in a reversed step the reflected
+detector sees the whole wave, less the bridge's own loss between it and the wattmeter.
+Source: C. A. Hoer, IEEE Trans. IM-21, 466 (1972) for the reflectometer's equation (from memory).
+"""
+
+from __future__ import annotations
+
+from functools import cached_property
+
+import numpy as np
+import numpy.typing as npt
+
+from .bench import STEP_KINDS, BenchRatings, BenchStep
+from .bridge import BAND_REACH
+from .laws import DiodeLaw
+from .loads import load_impedance_ohm, load_reflection, part_of
+from .meter import counting_sd
+from .reflection import rho_from_return_loss
+
+__all__ = ["LAW_SIZE", "BenchModel", "group_bands"]
+
+Array = npt.NDArray[np.float64]
+Complex = npt.NDArray[np.complex128]
+
+LAW_SIZE = 3
+#: Per band: ln k_f, ln k_r, d, c and the dummy's reflection as real and imaginary part, own loss [dB].
+BAND_SIZE = 9
+#: Counts are not believed beyond this part of themselves: no law follows a detector further.
+COUNT_PART = 5e-4
+
+# Priors (mean, sd): wide enough that a usable bench overrules them, narrow enough that what it leaves open stays
+# physical. A leak of 0.1 is a directivity of 20 dB; the load term of diodes in use spans 0.05 to 50.
+_LEAK_SD = 0.1
+_LOAD_TERM = (np.log(1.5), 1.5)
+#: Two diodes of one type: ln scale and ln load term of the reflected law against the forward one.
+_SAME_TYPE_SD = (0.15, 0.5)
+#: ln of reflected over forward gain: both sides of a coupler are usually built alike (common practice).
+_BALANCE_SD = 0.35
+#: The bridge's own loss between the reflected detector and the wattmeter [dB] (a 20-30 dB coupler; common practice).
+_OWN_LOSS = (0.05, 0.04)
+_LINE_DEG_SD = 0.5
+_LINE_LOSS_DB = 0.05
+
+
+def group_bands(steps: list[BenchStep]) -> list[float]:
+    """Centre frequencies [Hz] of the bands of a bench: steps within 10 % of a band's first one belong to it."""
+    groups: list[list[float]] = []
+    for hz in sorted({s.frequency_hz for s in steps if s.frequency_hz is not None}):
+        if groups and hz <= groups[-1][0] * (1.0 + BAND_REACH):
+            groups[-1].append(hz)
+        else:
+            groups.append([hz])
+    return [float(np.mean(group)) for group in groups]
+
+
+class BenchModel:
+    """Parameters as one vector, and the weighted residuals of all steps and priors at such vectors.
+
+    Vectors have shape (..., size): many are evaluated at once, which is what makes the fit's Jacobian cheap.
+    """
+
+    def __init__(self, steps: list[BenchStep], ratings: BenchRatings, z0_ohm: float) -> None:
+        """Sort `steps` into bands, load parts and lines. UnitError where a load cannot be read."""
+        self.steps = steps
+        self.ratings = ratings
+        self.z0_ohm = z0_ohm
+        self.scatter = 0.01  # the wattmeter's scatter from step to step, relative sd of power
+        self.bands = group_bands(steps)
+        self.band = np.array([self._band_of(step) for step in steps], dtype=int)
+        self.of_kind = {kind: np.flatnonzero([s.kind == kind for s in steps]) for kind in STEP_KINDS}
+        self.dummy_limit = float(rho_from_return_loss(ratings.dummy_return_loss_db))
+        loads = [steps[at] for at in self.of_kind["load"]]
+        self.parts = sorted({part_of(s, ratings) for s in loads}, key=str)
+        self.lines = sorted({self._line_of(s) for s in loads if s.line_deg}, key=str)
+        self._part = np.array([self.parts.index(part_of(s, ratings)) for s in loads], dtype=int)
+        self._line = np.array([self.lines.index(self._line_of(s)) if s.line_deg else -1 for s in loads], dtype=int)
+        self._impedance = np.array([load_impedance_ohm(s.load or "") for s in loads], dtype=complex)
+        self._forward = np.array([s.forward for s in steps])
+        self._reflected = np.array([s.reflected for s in steps])
+        self._hz = np.array([s.frequency_hz or np.nan for s in steps])
+        self._power = np.array([np.nan if s.power_w is None else s.power_w for s in steps])
+        self._line_deg = np.array([s.line_deg for s in steps])
+        self._sds = [
+            np.array([float(counting_sd(getattr(s, sd), s.samples)) for s in steps])
+            for sd in ("forward_sd", "reflected_sd")
+        ]
+
+    @property
+    def size(self) -> int:
+        """Length of a parameter vector."""
+        return self._lines_at + 2 * len(self.lines)
+
+    def band_slice(self, band: int) -> slice:
+        """Where band `band` has its parameters."""
+        start = 2 * LAW_SIZE + BAND_SIZE * band
+        return slice(start, start + BAND_SIZE)
+
+    def laws(self, vectors: Array) -> tuple[DiodeLaw, DiodeLaw]:
+        """Forward and reflected law of vectors, their parameters of shape (..., 1) to go with steps."""
+        return DiodeLaw.stacked(vectors[..., :LAW_SIZE]), DiodeLaw.stacked(vectors[..., LAW_SIZE : 2 * LAW_SIZE])
+
+    def leaks(self, vectors: Array, bands: npt.NDArray[np.intp]) -> tuple[Complex, Complex, Complex]:
+        """Complex d, c and dummy reflection in each of `bands`, shape (..., len(bands))."""
+        at = self._band_at(bands)
+        re, im = [2, 4, 6], [3, 5, 7]
+        d, c, g = (vectors[..., at + r] + 1j * vectors[..., at + i] for r, i in zip(re, im, strict=True))
+        return d, c, g
+
+    def load_reflections(self, vectors: Array) -> Complex:
+        """Complex reflection of every load step, shape (..., load steps)."""
+        parts = self._parts_at + 3 * self._part
+        lines = self._lines_at + 2 * np.maximum(self._line, 0)
+        behind = self._line >= 0
+        padded = np.concatenate([vectors, np.zeros((*vectors.shape[:-1], 2))], axis=-1)
+        loads = self.of_kind["load"]
+        return load_reflection(
+            self._impedance,
+            self._hz[loads],
+            error=vectors[..., parts],
+            nh=vectors[..., parts + 1],
+            pf=vectors[..., parts + 2],
+            line_deg=np.where(behind, self._line_deg[loads] + padded[..., lines], 0.0),
+            line_loss_db=np.where(behind, padded[..., lines + 1], 0.0),
+            z0_ohm=self.z0_ohm,
+        )
+
+    def residuals(self, vectors: Array) -> Array:
+        """All residuals, each over its sd, shape (..., m): in the order of `residual_steps`, then the priors'."""
+        forward, reflected = self.laws(vectors)
+        loads = self.of_kind["load"]
+        _, _, dummy = self.leaks(vectors, self.band[self.of_kind["power"]])
+        power, counts = self._forward_steps(vectors, self.of_kind["power"], dummy, forward, reflected)
+        _, load_counts = self._forward_steps(vectors, loads, self.load_reflections(vectors), forward, reflected)
+        turned = self._reversed_steps(vectors, reflected)
+        dark = self._dark_steps(forward, reflected)
+        return np.concatenate([*dark, power, counts, turned, load_counts, self._prior_residuals(vectors)], axis=-1)
+
+    @property
+    def residual_steps(self) -> list[tuple[int, str]]:
+        """Step index and what is compared ("forward", "reflected", "power") of each residual before the priors."""
+        kinds = [("dark", "forward"), ("dark", "reflected"), ("power", "power"), ("power", "reflected")]
+        kinds += [("reversed", "power"), ("load", "reflected")]
+        return [(int(step), what) for kind, what in kinds for step in self.of_kind[kind]]
+
+    def reversed_leaks(self, vector: Array) -> dict[int, float]:
+        """What the forward detector saw of the whole wave in each band's reversed steps: mean |leak| per band."""
+        forward, reflected = self.laws(vector)
+        seen: dict[int, list[float]] = {}
+        for step in self.of_kind["reversed"]:
+            at = int(self._band_at(self.band[step]))
+            little = float(forward.square(self._forward[step])[0]) / float(np.exp(2.0 * vector[at]))
+            whole = float(reflected.square(self._reflected[step])[0]) / float(np.exp(2.0 * vector[at + 1]))
+            seen.setdefault(int(self.band[step]), []).append(max(little, 0.0) / whole)
+        return {band: float(np.sqrt(np.mean(ratios))) for band, ratios in seen.items()}
+
+    def _forward_steps(
+        self, vectors: Array, at: npt.NDArray[np.intp], gamma: Complex, forward: DiodeLaw, reflected: DiodeLaw
+    ) -> tuple[Array, Array]:
+        """Residuals of steps in which the forward detector supplies the power: wattmeter's and reflected count's."""
+        d, c, _ = self.leaks(vectors, self.band[at])
+        gains = self._band_at(self.band[at])
+        square = np.maximum(forward.square(self._forward[at]), 1e-12)
+        incident = square / np.exp(2.0 * vectors[..., gains]) / np.abs(1.0 + c * gamma) ** 2
+        noise = forward.slope(self._forward[at]) * self._count_sd(0, at, self._forward[at]) / square
+        seen = incident * np.exp(2.0 * vectors[..., gains + 1]) * np.abs(gamma + d) ** 2
+        count = reflected.counts(seen)
+        # The forward count's own noise moves the power it supplies, and so the count expected here.
+        moved = noise * seen / reflected.slope(count)
+        counts = (self._reflected[at] - count) / np.hypot(self._count_sd(1, at, count), moved)
+        return self._wattmeter(at, incident, noise), counts
+
+    def _reversed_steps(self, vectors: Array, reflected: DiodeLaw) -> Array:
+        at = self.of_kind["reversed"]
+        gains = self._band_at(self.band[at])
+        square = np.maximum(reflected.square(self._reflected[at]), 1e-12)
+        noise = reflected.slope(self._reflected[at]) * self._count_sd(1, at, self._reflected[at]) / square
+        lost = 10.0 ** (-vectors[..., gains + 8] / 10.0)
+        return self._wattmeter(at, square / np.exp(2.0 * vectors[..., gains + 1]) * lost, noise)
+
+    def _dark_steps(self, forward: DiodeLaw, reflected: DiodeLaw) -> tuple[Array, Array]:
+        at = self.of_kind["dark"]
+        return (
+            (self._forward[at] - forward.offset) / self._count_sd(0, at, np.zeros(1)),
+            (self._reflected[at] - reflected.offset) / self._count_sd(1, at, np.zeros(1)),
+        )
+
+    def _wattmeter(self, at: npt.NDArray[np.intp], seen_w: Array, noise: Array) -> Array:
+        return np.asarray(np.log(seen_w / self._power[at]) / np.hypot(self.scatter, noise))
+
+    def _count_sd(self, channel: int, at: npt.NDArray[np.intp], count: Array) -> Array:
+        return np.asarray(np.hypot(self._sds[channel][at], COUNT_PART * count))
+
+    def _band_of(self, step: BenchStep) -> int:
+        hz = step.frequency_hz
+        return -1 if hz is None else int(np.argmin([abs(np.log(hz / centre)) for centre in self.bands]))
+
+    def _band_at(self, bands: npt.NDArray[np.intp]) -> npt.NDArray[np.intp]:
+        return np.asarray(2 * LAW_SIZE + BAND_SIZE * bands)
+
+    @property
+    def _parts_at(self) -> int:
+        return 2 * LAW_SIZE + BAND_SIZE * len(self.bands)
+
+    @property
+    def _lines_at(self) -> int:
+        return self._parts_at + 3 * len(self.parts)
+
+    def _line_of(self, step: BenchStep) -> tuple[float, int, float | None]:
+        return (step.line_deg, self._band_of(step), step.line_loss_db)
+
+    def _prior_residuals(self, vectors: Array) -> Array:
+        mean, sd = self.priors
+        held = np.isfinite(sd)
+        own = ((vectors - mean) / np.where(held, sd, 1.0))[..., held]
+        alike = (vectors[..., LAW_SIZE + 1 : 2 * LAW_SIZE] - vectors[..., 1:LAW_SIZE]) / _SAME_TYPE_SD
+        gains = self._band_at(np.arange(len(self.bands)))
+        balance = (vectors[..., gains + 1] - vectors[..., gains]) / _BALANCE_SD
+        return np.concatenate([own, alike, balance], axis=-1)
+
+    @cached_property
+    def priors(self) -> tuple[Array, Array]:
+        """Mean and sd of every parameter's prior; sd is infinite where there is none."""
+        mean, sd = np.zeros(self.size), np.full(self.size, np.inf)
+        mean[2], sd[2] = _LOAD_TERM
+        for band in range(len(self.bands)):
+            at = self.band_slice(band).start
+            sd[at + 2 : at + 6] = _LEAK_SD
+            sd[at + 6 : at + 8] = self.dummy_limit / 2.0
+            mean[at + 8], sd[at + 8] = _OWN_LOSS
+        for number, part in enumerate(self.parts):
+            at = self._parts_at + 3 * number
+            # A tolerance is a limit: its sd is that of an even spread. Inductance and capacitance lie in 0..limit.
+            mean[at : at + 3] = 0.0, part.nh / 2.0, part.pf / 2.0
+            sd[at : at + 3] = np.array([2.0 * part.pct / 100.0, part.nh, part.pf]) / np.sqrt(12.0) + 1e-9
+        for number, (_, _, loss) in enumerate(self.lines):
+            at = self._lines_at + 2 * number
+            mean[at : at + 2] = 0.0, _LINE_LOSS_DB / 2.0 if loss is None else loss
+            sd[at : at + 2] = _LINE_DEG_SD, _LINE_LOSS_DB / 2.0
+        return mean, sd

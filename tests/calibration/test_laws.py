@@ -1,0 +1,76 @@
+"""One battery for every detector law: a new line in LAWS is found here by itself."""
+
+import numpy as np
+import pytest
+
+from calibration.detector import Diode, detected_v, thermal_v
+from calibration.law_table import LawTable
+from calibration.laws import LAWS, DiodeLaw
+
+EXAMPLES = {"diode": [DiodeLaw(5.2, 20.5, 2.09), DiodeLaw(83.0, 328.0, 0.05), DiodeLaw(0.0, 3.0, 60.0)]}
+CASES = [(name, law) for name in LAWS for law in EXAMPLES[name]]
+COUNTS = np.concatenate([np.linspace(-8.0, 12.0, 41), np.geomspace(12.5, 65520.0, 300)])
+
+
+@pytest.mark.parametrize(("name", "law"), CASES)
+def test_law_counts_undoes_square(name, law):
+    """Counts to the wave's square and back is where it started, from below dark to full scale."""
+    assert law.counts(law.square(COUNTS)) == pytest.approx(COUNTS, rel=1e-9, abs=1e-7)
+
+
+@pytest.mark.parametrize(("name", "law"), CASES)
+def test_law_rises_and_keeps_its_slope_below_dark(name, law):
+    """The law rises everywhere and goes straight on below dark, so that averages of noise stay unbiased."""
+    squares = law.square(COUNTS)
+    assert (np.diff(squares) > 0).all()
+    assert law.square(law.offset) == pytest.approx(0.0, abs=1e-12)
+    assert law.square(law.offset - 0.01) == pytest.approx(-law.square(law.offset + 0.01), rel=1e-3)
+
+
+@pytest.mark.parametrize(("name", "law"), CASES)
+def test_law_slope_is_the_derivative(name, law):
+    """slope equals central differences of square."""
+    step = 1e-4
+    numeric = (law.square(COUNTS + step) - law.square(COUNTS - step)) / (2 * step)
+    away = np.abs(COUNTS - law.offset) > step
+    assert law.slope(COUNTS)[away] == pytest.approx(numeric[away], rel=1e-5)
+
+
+@pytest.mark.parametrize(("name", "law"), CASES)
+def test_law_sensitivity_is_the_derivative(name, law):
+    """sensitivity equals central differences of square in each parameter, and parameters make the law again."""
+    vector = law.parameters
+    assert type(law).from_parameters(vector).square(COUNTS) == pytest.approx(law.square(COUNTS), rel=1e-12)
+    counts = COUNTS[np.abs(COUNTS - law.offset) > 0.3]
+    for place in range(len(vector)):
+        step = np.zeros(len(vector))
+        step[place] = 1e-5
+        high, low = (type(law).from_parameters(vector + sign * step).square(counts) for sign in (1, -1))
+        found = law.sensitivity(counts)[:, place]
+        assert found == pytest.approx((high - low) / 2e-5, rel=1e-4, abs=1e-4 * np.abs(found).max() * 1e-6 + 1e-6)
+
+
+@pytest.mark.parametrize(("name", "law"), CASES)
+@pytest.mark.parametrize("full_scale", [1023, 4095, 65520, 16 * 65535])
+def test_law_table_follows_the_law(name, law, full_scale):
+    """Between codes the look-up is off by less than a twentieth of a count; at codes it is the law."""
+    table = LawTable(law, full_scale)
+    counts = law.offset + np.geomspace(2.0, full_scale - law.offset - 1.0, 500)
+    counts = counts[counts > 0]
+    off = (table.square(counts) - law.square(counts)) / law.slope(counts)
+    assert np.abs(off).max() < 0.05
+    whole = np.unique(np.round(counts[counts < 65535]))
+    if full_scale <= 65535:
+        assert table.square(whole) == pytest.approx(law.square(whole), rel=1e-12)
+    assert np.isnan(table.square(np.array([np.nan]))).all()
+
+
+def test_diode_law_is_the_circuit_in_counts():
+    """The three-parameter law equals the circuit (part A, 100 kohm, 3.3 V on 12 bit) at every level."""
+    diode, load = Diode(2.2e-8, 1.08), 1e5
+    per_volt = 4095 / 3.3
+    nvt = diode.ideality * thermal_v(298.15)
+    law = DiodeLaw(7.0, nvt * per_volt, load * diode.saturation_a / nvt)
+    peak = np.geomspace(0.01, 3.5, 40)
+    counts = 7.0 + per_volt * detected_v(peak, diode, load)
+    assert np.sqrt(law.square(counts)) * nvt == pytest.approx(peak, rel=1e-8)

@@ -1,0 +1,1 @@
+"""Floor 2: people: the command line and the screens."""
