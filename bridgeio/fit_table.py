@@ -1,0 +1,201 @@
+"""The [fit] table of a bridge file: what a fit found, so that a reading needs no fit.
+
+One rule: the numbers carry an id over themselves as written, so that a changed digit, or a board that carries another
+calibration, is noticed.
+"""
+
+from __future__ import annotations
+
+import math
+import os
+import tempfile
+from dataclasses import dataclass
+from datetime import datetime
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from calibration import __version__
+from calibration.bridge import Band, Bridge
+from calibration.fit import Fit
+from calibration.laws import LAWS
+
+from .errors import FileError
+from .framing import crc16
+
+__all__ = ["FitTable", "write_fit", "write_whole"]
+
+#: The numbers of a band in the file, beside its covariance.
+_BAND_KEYS = (
+    "frequency_hz",
+    "gain_forward",
+    "gain_reflected",
+    "directivity",
+    "directivity_limit",
+    "forward_leak",
+    "forward_leak_limit",
+    "angle_cosine",
+)
+_SIDES = ("forward", "reflected")
+
+
+@dataclass(frozen=True, slots=True)
+class FitTable:
+    """A [fit] table: its id and its plain content."""
+
+    id: int
+    content: dict[str, Any]
+
+    @classmethod
+    def of_fit(cls, fit: Fit, written: datetime) -> FitTable:
+        """The table of a fit done now."""
+        bridge = fit.bridge
+        content: dict[str, Any] = {
+            "date": written.isoformat(timespec="seconds"),
+            "program": f"bridgewright {__version__}",
+            "reference_pct": bridge.reference_pct,
+            "reference_scatter_pct": 100.0 * fit.reference_scatter,
+            "forward": _side_of(bridge, "forward"),
+            "reflected": _side_of(bridge, "reflected"),
+            "band": [_band_of(band) for band in bridge.bands],
+            "residual": [{"step": r.step + 1, "what": r.what, "sigmas": round(r.sigmas, 3)} for r in fit.residuals],
+            "notes": list(fit.notes),
+        }
+        return cls(_id_of(content), content)
+
+    @classmethod
+    def read(cls, content: dict[str, Any], source: str) -> FitTable:
+        """The table as found in a file. FileError where it is not whole or its numbers have changed."""
+        again = f"run `bridgewright fit {source} -o {source}` to write it anew"
+        try:
+            found, expected = int(str(content["id"]), 16), _id_of(content)
+            table = cls(found, content)
+            table.bridge("", 1, 50.0, None)
+        except (KeyError, TypeError, ValueError) as error:
+            raise FileError(f"{source}: fit: is not whole ({type(error).__name__}: {error}); {again}") from error
+        if found != expected:
+            raise FileError(
+                f"{source}: fit.id: found {found:04X}, but its numbers give {expected:04X}: "
+                f"they were changed after the fit; {again}"
+            )
+        return table
+
+    def bridge(self, name: str, full_scale: int, z0_ohm: float, device_id: int | None) -> Bridge:
+        """The calibrated bridge. KeyError, TypeError or ValueError where the table is not whole: see `read`."""
+        laws = {side: self._law(side) for side in _SIDES}
+        return Bridge(
+            name=name,
+            full_scale=full_scale,
+            forward_law=laws["forward"],
+            reflected_law=laws["reflected"],
+            bands=tuple(_band_from(band) for band in self.content["band"]),
+            z0_ohm=z0_ohm,
+            forward_sd=float(self.content["forward"]["sd"]),
+            reflected_sd=float(self.content["reflected"]["sd"]),
+            reference_pct=float(self.content["reference_pct"]),
+            device_id=device_id,
+        )
+
+    def _law(self, side: str) -> Any:
+        table = self.content[side]
+        return LAWS[table["law"]].from_parameters([float(value) for value in table["parameters"]])
+
+
+def write_fit(path: str | Path, sheet: str, table: FitTable) -> None:
+    """Write the text of a bench sheet with `table` as its [fit] to `path`; comments and steps stay as they are."""
+    import tomlkit
+
+    document = tomlkit.parse(sheet)
+    document.pop("fit", None)
+    text = tomlkit.dumps(document).rstrip() + "\n"
+    write_whole(path, text + "\n" + _dumps(table))
+
+
+def write_whole(path: str | Path, text: str) -> None:
+    """Write a file whole or not at all: temporary file beside it, synced, renamed. FileError if that fails."""
+    target = Path(path)
+    try:
+        handle, temporary = tempfile.mkstemp(prefix=f".{target.name}.", dir=target.parent)
+        try:
+            with os.fdopen(handle, "w", encoding="utf-8") as file:
+                file.write(text)
+                file.flush()
+                os.fsync(file.fileno())
+            # mkstemp makes it private; a bridge file is as readable as what it replaces, or as any new file.
+            os.chmod(temporary, target.stat().st_mode & 0o777 if target.exists() else 0o666 & ~_umask())
+            os.replace(temporary, target)
+        except BaseException:
+            os.unlink(temporary)
+            raise
+    except OSError as error:
+        raise FileError(f"{path}: cannot be written: {error.strerror}; what was there before is unchanged") from error
+
+
+def _umask() -> int:
+    mask = os.umask(0)
+    os.umask(mask)
+    return mask
+
+
+def _dumps(table: FitTable) -> str:
+    """The table as TOML, written by hand for its layout: a line a band, a line a residual."""
+    lines = ["# Written by `bridgewright fit`; not meant to be edited: id tells when a number has changed.", "[fit]"]
+    lines.append(f'id = "{table.id:04X}"')
+    content = table.content
+    lines += [
+        f"{key} = {_value(content[key])}" for key in ("date", "program", "reference_pct", "reference_scatter_pct")
+    ]
+    lines += ["notes = [", *(f"  {_value(note)}," for note in content["notes"]), "]"]
+    lines += ["residual = ["]
+    lines += [f"  {{ {', '.join(f'{k} = {_value(v)}' for k, v in row.items())} }}," for row in content["residual"]]
+    lines += ["]"]
+    for side in _SIDES:
+        lines += ["", f"[fit.{side}]", *(f"{key} = {_value(value)}" for key, value in content[side].items())]
+    for band in content["band"]:
+        lines += ["", "[[fit.band]]", *(f"{key} = {_value(value)}" for key, value in band.items())]
+    return "\n".join(lines) + "\n"
+
+
+def _value(value: object) -> str:
+    if isinstance(value, list):
+        return f"[{', '.join(_value(one) for one in value)}]"
+    if isinstance(value, str):
+        import tomlkit
+
+        return tomlkit.item(value).as_string()
+    return repr(value)
+
+
+def _side_of(bridge: Bridge, side: str) -> dict[str, Any]:
+    law = bridge.forward_law if side == "forward" else bridge.reflected_law
+    name = next(name for name, kind in LAWS.items() if isinstance(law, kind))
+    sd = bridge.forward_sd if side == "forward" else bridge.reflected_sd
+    return {"law": name, "parameters": [float(value) for value in law.parameters], "sd": float(sd)}
+
+
+def _band_of(band: Band) -> dict[str, Any]:
+    lower = band.covariance[np.tril_indices(len(band.covariance))]
+    return {key: float(getattr(band, key)) for key in _BAND_KEYS} | {"covariance": [float(value) for value in lower]}
+
+
+def _band_from(table: dict[str, Any]) -> Band:
+    lower = [float(value) for value in table["covariance"]]
+    size = (math.isqrt(8 * len(lower) + 1) - 1) // 2
+    covariance = np.zeros((size, size))
+    covariance[np.tril_indices(size)] = lower
+    covariance = covariance + np.tril(covariance, -1).T
+    return Band(**{key: float(table[key]) for key in _BAND_KEYS}, covariance=covariance)
+
+
+def _id_of(content: dict[str, Any]) -> int:
+    """CRC-16 over the fitted numbers, one a line: keys sorted, shortest round-trip decimals; 0 becomes 1."""
+    numbers = {"reference_pct": content["reference_pct"]}
+    for side in _SIDES:
+        numbers |= {f"{side}.{n}": value for n, value in enumerate(content[side]["parameters"])}
+        numbers[f"{side}.sd"] = content[side]["sd"]
+    for place, band in enumerate(content["band"]):
+        numbers |= {f"band.{place}.{key}": band[key] for key in _BAND_KEYS}
+        numbers |= {f"band.{place}.covariance.{n}": value for n, value in enumerate(band["covariance"])}
+    lines = "".join(f"{key} = {float(numbers[key])!r}\n" for key in sorted(numbers))
+    return crc16(lines.encode("ascii")) or 1

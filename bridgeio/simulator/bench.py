@@ -1,0 +1,154 @@
+"""The simulated bench: the builder's own calibration of the simulated bridge, with a builder's own errors.
+
+One rule: what `sim:` is read with is fitted from these steps, not from the truth; parts and wattmeter are as
+good as a careful builder's, and no better.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from calibration.bench import BenchRatings, BenchStep
+
+from . import coupler, detector, feed
+from .station import source_lift
+
+__all__ = ["FREQUENCIES_HZ", "RATINGS", "bench_steps"]
+
+Array = npt.NDArray[np.float64]
+
+#: One frequency a band, 160 to 10 m.
+FREQUENCIES_HZ = (1.85e6, 3.65e6, 5.36e6, 7.1e6, 10.12e6, 14.1e6, 18.1e6, 21.2e6, 24.9e6, 28.4e6)
+MAIN_HZ = 14.1e6
+LOADED_HZ = (3.65e6, MAIN_HZ, 28.4e6)
+SAMPLES = 200
+
+#: Kind of step -> powers [W] on the main band, and on each other.
+POWERS_W: dict[str, tuple[tuple[float, ...], tuple[float, ...]]] = {
+    "power": ((0.1, 0.3, 1.0, 3.0, 10.0, 30.0, 60.0, 100.0), (0.5, 5.0, 50.0)),
+    "reversed": ((0.2, 2.0, 20.0, 80.0), (10.0,)),
+}
+
+#: What the builder can say of the references; the parts keep within it.
+RATINGS = BenchRatings(reference_pct=5.0, dummy_return_loss_db=36.0, resistor_pct=1.0)
+
+METER_GAIN, METER_SCATTER = 1.018, 0.006  # the wattmeter reads high, and not always the same
+LINE_DEG, LINE_LOSS_DB = 44.6, 0.03  # what is sold and written down as 45 degrees
+
+
+@dataclass(frozen=True, slots=True)
+class _Part:
+    """A resistor as it really is: resistance [ohm], series inductance [H], shunt capacitance [F]."""
+
+    ohm: float
+    henry: float = 1.3e-9
+    farad: float = 0.45e-12
+
+    def gamma(self, frequency_hz: float) -> complex:
+        """Reflection in 50 ohm."""
+        omega = 2.0 * np.pi * frequency_hz
+        admittance = 1.0 / (self.ohm + 1j * omega * self.henry) + 1j * omega * self.farad
+        return complex(feed.reflection(1.0 / admittance))
+
+
+#: Near 42 dB on the low bands, 37 dB at the top.
+DUMMY = _Part(49.2, 14e-9, 3e-12)
+
+#: As written in the sheet -> the part.
+LOADS: dict[str, _Part] = {
+    "25": _Part(25.13),
+    "100": _Part(99.36),
+    "16.67": _Part(16.71),
+    "150": _Part(150.9),
+    "open": _Part(1e9, 0.0, 0.3e-12),
+    "short": _Part(1e-3, 0.6e-9, 0.0),
+}
+
+
+def bench_steps(seed: int = 1) -> list[BenchStep]:
+    """Return the steps of the simulated bench, in the order they were taken; noise and scatter follow `seed`.
+
+    Dark; eight powers on 20 m and three on each other band; the bridge turned, four powers and one; known
+    loads, two of them also behind line, on three bands, open and short at 1 W only.
+    """
+    bench = _Bench(seed)
+    steps = [bench.dark()]
+    for kind, (main_w, other_w) in POWERS_W.items():
+        for frequency_hz in FREQUENCIES_HZ:
+            watts = main_w if frequency_hz == MAIN_HZ else other_w
+            steps += [bench.power(kind, frequency_hz, power_w) for power_w in watts]
+    for frequency_hz in LOADED_HZ:
+        steps += [bench.load(frequency_hz, name, 5.0) for name in ("25", "100", "16.67", "150")]
+        steps += [bench.load(frequency_hz, name, 5.0, line_deg=45.0) for name in ("25", "100")]
+        steps += [bench.load(frequency_hz, name, 1.0) for name in ("open", "short")]
+    return steps
+
+
+class _Bench:
+    """Bridge, transmitter, wattmeter and parts, at 25 C."""
+
+    def __init__(self, seed: int) -> None:
+        self._chance = np.random.default_rng([seed, 2])
+        self._detectors = [(part, detector.Table(part, 25.0)) for part in (detector.FORWARD, detector.REFLECTED)]
+
+    def dark(self) -> BenchStep:
+        """Transmitter off."""
+        return self._step("dark", np.zeros(2))
+
+    def power(self, kind: str, frequency_hz: float, power_w: float) -> BenchStep:
+        """Dummy load; the wattmeter between bridge and dummy says the power. "reversed" turns the bridge."""
+        looking = coupler.looking_back if kind == "reversed" else coupler.looking_forward
+        ports_v = _ports_v(looking(frequency_hz), DUMMY.gamma(frequency_hz), power_w)
+        said_w = power_w * METER_GAIN * (1.0 + METER_SCATTER * self._chance.standard_normal())
+        return self._step(kind, ports_v, frequency_hz=frequency_hz, power_w=float(f"{said_w:.4g}"))
+
+    def load(self, frequency_hz: float, name: str, power_w: float, line_deg: float = 0.0) -> BenchStep:
+        """A known load, directly or behind line; power [W] as the transmitter gives a matched one."""
+        gamma = LOADS[name].gamma(frequency_hz)
+        if line_deg:
+            gamma *= 10.0 ** (-LINE_LOSS_DB / 10.0) * np.exp(-2j * np.radians(LINE_DEG))
+        ports_v = _ports_v(coupler.looking_forward(frequency_hz), gamma, power_w)
+        return self._step("load", ports_v, frequency_hz=frequency_hz, load=name, line_deg=line_deg)
+
+    def _step(
+        self,
+        kind: str,
+        ports_v: Array,
+        *,
+        frequency_hz: float | None = None,
+        power_w: float | None = None,
+        load: str | None = None,
+        line_deg: float = 0.0,
+    ) -> BenchStep:
+        (forward, forward_sd), (reflected, reflected_sd) = (
+            self._counts(side, peak_v) for side, peak_v in enumerate(ports_v.tolist())
+        )
+        return BenchStep(
+            kind,
+            forward,
+            reflected,
+            frequency_hz=frequency_hz,
+            power_w=power_w,
+            load=load,
+            line_deg=line_deg,
+            forward_sd=forward_sd,
+            reflected_sd=reflected_sd,
+            samples=SAMPLES,
+        )
+
+    def _counts(self, side: int, peak_v: float) -> tuple[float, float]:
+        """Mean and scatter [counts] of SAMPLES tallies, each a sum of conversions, as a sheet shows them."""
+        part, table = self._detectors[side]
+        noise = self._chance.standard_normal((SAMPLES, detector.SUMMED))
+        dc_v = np.full(noise.shape, table.dc_v(np.asarray(peak_v)))
+        tallies = detector.convert(part, dc_v, noise).sum(axis=1)
+        return round(float(tallies.mean()), 2), round(float(tallies.std(ddof=1)), 2)
+
+
+def _ports_v(ports: coupler.Ports, gamma: complex, power_w: float) -> Array:
+    """RF peak volts [V] at the forward and reflected detector."""
+    wave_v = np.sqrt(2.0 * feed.Z0_OHM * power_w) * source_lift(gamma)
+    return np.asarray([wave_v * amplitude for amplitude in ports.amplitudes(gamma)], dtype=float).reshape(2)

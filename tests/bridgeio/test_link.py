@@ -1,0 +1,257 @@
+"""The reader thread: what comes is handed on, what goes wrong is said, and it always ends."""
+
+from __future__ import annotations
+
+import os
+import threading
+import time
+import tty
+from collections.abc import Callable, Iterator
+from io import FileIO
+
+import pytest
+
+from bridgeio.errors import LinkError
+from bridgeio.frames import Item, Tallies
+from bridgeio.framing import pack
+from bridgeio.link import PHASES, Link, LinkState
+from bridgeio.ports import DeviceSource, EndOfSource, Source, open_source
+from bridgeio.receiver import Receiver
+
+
+class Listener:
+    """Keeps what a link says; `fail` is raised when items come."""
+
+    def __init__(self, fail: Exception | None = None) -> None:
+        self.items: list[Item] = []
+        self.arrivals: list[float] = []
+        self.states: list[LinkState] = []
+        self._fail = fail
+
+    def on_items(self, items: list[Item], arrival_s: float) -> None:
+        """Keep, or fail."""
+        if self._fail:
+            raise self._fail
+        self.items += items
+        self.arrivals.append(arrival_s)
+
+    def on_state(self, state: LinkState) -> None:
+        """Keep."""
+        self.states.append(state)
+
+    @property
+    def phases(self) -> list[str]:
+        """Phases in order, each change once."""
+        phases = [state.phase for state in self.states]
+        return [p for n, p in enumerate(phases) if n == 0 or p != phases[n - 1]]
+
+    def link(self, source: Source, silent_after_s: float = 3.0) -> Link:
+        """A link that tells this listener, started."""
+        link = Link(source, Receiver(), self.on_items, self.on_state, silent_after_s=silent_after_s)
+        link.start()
+        return link
+
+
+class Scripted:
+    """A source that gives prepared pieces, then waits, ends, breaks or hangs."""
+
+    name, simulated, live = "scripted", False, True
+
+    def __init__(self, *pieces: bytes, then: Callable[[], bytes] = lambda: b"") -> None:
+        self._pieces, self._then = list(pieces), then
+        self.calls: list[tuple[str, str]] = []
+
+    def _note(self, what: str) -> None:
+        self.calls.append((what, threading.current_thread().name))
+
+    def open(self) -> None:
+        """Note who opens."""
+        self._note("open")
+
+    def read(self) -> bytes:
+        """Give the next piece."""
+        self._note("read")
+        time.sleep(0.001)
+        return self._pieces.pop(0) if self._pieces else self._then()
+
+    def close(self) -> None:
+        """Note who closes."""
+        self._note("close")
+
+
+def until(condition: Callable[[], bool], timeout_s: float = 10.0) -> None:
+    """Wait for a condition, or fail."""
+    deadline_s = time.monotonic() + timeout_s
+    while not condition():
+        assert time.monotonic() < deadline_s, "waited in vain"
+        time.sleep(0.005)
+
+
+def frames(count: int) -> bytes:
+    """So many tallies on the wire, after the lone zero of a start."""
+    return b"\0" + pack(Tallies.of(range(count), [10 * n for n in range(count)], 1000, 50))
+
+
+@pytest.fixture
+def pty() -> Iterator[tuple[FileIO, str]]:
+    """A pseudo terminal: its master, to write to and to close, and the path of the other end."""
+    master, slave = os.openpty()
+    tty.setraw(slave)
+    path = os.ttyname(slave)
+    os.close(slave)
+    with open(master, "r+b", buffering=0) as held:
+        yield held, path
+
+
+def test_frames_pass_from_port_to_listener(pty: tuple[FileIO, str]) -> None:
+    """Frames written into a port reach the listener with the time of their arrival."""
+    master, path = pty
+    listener = Listener()
+    link = listener.link(DeviceSource(path))
+    until(lambda: "open" in listener.phases)
+    before_s = time.time()
+    master.write(frames(20))
+    until(lambda: sum(len(i) for i in listener.items if isinstance(i, Tallies)) == 20)
+    assert before_s <= listener.arrivals[0] <= time.time()
+    assert link.state == LinkState("open", f"{path} is open")
+    link.stop()
+
+
+def test_port_unplugged_is_lost_in_words(pty: tuple[FileIO, str]) -> None:
+    """When the other end goes away the link is lost, says so, and its thread ends."""
+    master, path = pty
+    listener = Listener()
+    link = listener.link(DeviceSource(path))
+    until(lambda: "open" in listener.phases)
+    master.close()
+    until(lambda: link.state.phase == "lost")
+    assert link.state.words.startswith(f"{path} is gone")
+    assert listener.phases == ["opening", "open", "lost"]
+    link.stop()
+
+
+def test_port_that_does_not_open() -> None:
+    """A port that is not there is lost with the words of the error; stop raises nothing."""
+    listener = Listener()
+    link = listener.link(DeviceSource("/dev/no-such-port"))
+    until(lambda: link.state.phase == "lost")
+    assert "/dev/no-such-port is not there" in link.state.words
+    link.stop()
+
+
+def test_silence_is_noticed_and_ends(pty: tuple[FileIO, str]) -> None:
+    """Without bytes the link is silent, in seconds, and open again with the next frame."""
+    master, path = pty
+    listener = Listener()
+    link = listener.link(DeviceSource(path), silent_after_s=0.2)
+    until(lambda: link.state == LinkState("silent", "open but silent for 1 s"))
+    master.write(frames(3))
+    until(lambda: link.state.phase == "open")
+    until(lambda: listener.phases == ["opening", "open", "silent", "open"])
+    link.stop()
+
+
+def test_unreadable_bytes_do_not_end_the_silence() -> None:
+    """Bytes that make no frame count as silence, with another reason."""
+    listener = Listener()
+    link = listener.link(Scripted(then=lambda: b"\xf3\x8a\x91"), silent_after_s=0.2)
+    until(lambda: link.state.phase == "silent")
+    assert "nothing that came in 0 s could be read: wrong rate?" in link.state.words
+    link.stop()
+
+
+def test_silence_is_seen_while_a_read_hangs() -> None:
+    """A read that never returns does not keep the state at open, nor stop from returning."""
+    release = threading.Event()
+    listener = Listener()
+
+    def hang() -> bytes:
+        release.wait(30)
+        return b""
+
+    source = Scripted(then=hang)
+    link = listener.link(source, silent_after_s=0.2)
+    until(lambda: link.state.phase == "silent")
+    started_s = time.monotonic()
+    link.stop(timeout_s=0.1)
+    assert time.monotonic() - started_s < 5.0
+    assert link.state == LinkState("lost", "scripted does not answer and was left behind")
+    release.set()
+    until(lambda: source.calls[-1][0] == "close")
+
+
+def test_end_of_a_simulation() -> None:
+    """A bounded simulation ends the link with all its frames handed on."""
+    listener = Listener()
+    link = listener.link(open_source("sim:duration=3&pace=fast"))
+    until(lambda: link.state.phase == "ended")
+    assert "has ended after 3 s" in link.state.words
+    assert sum(len(i) for i in listener.items if isinstance(i, Tallies)) >= 299
+    link.stop()
+
+
+def test_one_thread_opens_reads_and_closes() -> None:
+    """Only the reader thread touches the source, and closing is the last thing it does."""
+    source, listener = Scripted(frames(2)), Listener()
+    link = listener.link(source)
+    until(lambda: bool(listener.items))
+    link.stop()
+    assert {thread for _, thread in source.calls} == {"link reader"}
+    assert source.calls[0][0] == "open"
+    assert [what for what, _ in source.calls].count("close") == 1
+    assert source.calls[-1][0] == "close"
+
+
+def test_stop_joins_the_thread() -> None:
+    """After stop the thread is gone, the state is ended, and a second stop is harmless."""
+    listener, before = Listener(), set(threading.enumerate())
+    link = listener.link(Scripted())
+    until(lambda: "open" in listener.phases)
+    link.stop()
+    assert set(threading.enumerate()) <= before
+    assert link.state == LinkState("ended", "scripted is closed")
+    link.stop()
+
+
+def test_stop_before_start() -> None:
+    """A link that was never started can be stopped."""
+    listener = Listener()
+    Link(Scripted(), Receiver(), listener.on_items, listener.on_state).stop()
+    assert listener.states == []
+
+
+def test_listener_may_stop_the_link_itself() -> None:
+    """Stopping from inside a listener does not wait for itself."""
+    listener = Listener()
+    link = Link(Scripted(frames(2)), Receiver(), lambda _items, _at: link.stop(), listener.on_state)
+    link.start()
+    until(lambda: link.state.phase == "ended")
+
+
+def test_listener_that_fails() -> None:
+    """A fault in a listener closes the port, is told as lost, and is raised by stop, once."""
+    source, listener = Scripted(frames(2)), Listener(fail=ZeroDivisionError("by zero"))
+    link = listener.link(source)
+    until(lambda: link.state.phase == "lost")
+    assert link.state.words == "reading stopped by a fault in the program: ZeroDivisionError: by zero"
+    assert source.calls[-1][0] == "close"
+    with pytest.raises(ZeroDivisionError, match="by zero"):
+        link.stop()
+    link.stop()
+
+
+@pytest.mark.parametrize(
+    ("error", "phase"), [(LinkError("it is gone"), "lost"), (EndOfSource("it has ended"), "ended")]
+)
+def test_how_a_source_ends(error: Exception, phase: str) -> None:
+    """A lost port is lost, an end is an end; both in the source's own words."""
+
+    def fail() -> bytes:
+        raise error
+
+    listener = Listener()
+    link = listener.link(Scripted(frames(1), then=fail))
+    until(lambda: link.state.phase == phase)
+    assert link.state.words == str(error)
+    assert set(listener.phases) <= set(PHASES)
+    link.stop()

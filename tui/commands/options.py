@@ -1,0 +1,51 @@
+"""Options that several commands share, so that one word means one thing everywhere."""
+
+from __future__ import annotations
+
+import argparse
+
+__all__ = ["add_reading_options", "add_source_options", "at_least_one"]
+
+_SOURCE_HELP = (
+    "device path such as /dev/ttyUSB0, file:PATH (a capture or text lines; file:- is standard input), or sim: "
+    "(the simulated bridge, the default; options as sim:antenna=dipole&power=50)"
+)
+
+
+def add_source_options(parser: argparse.ArgumentParser) -> None:
+    """SOURCE and what belongs to any source."""
+    parser.add_argument("source", nargs="?", default="sim:", metavar="SOURCE", help=_SOURCE_HELP)
+    parser.add_argument("--baud", type=_rate, default=115200, metavar="RATE", help="rate of a serial port (115200)")
+    parser.add_argument(
+        "--wire", choices=("auto", "text"), default="auto", help="text: lines only, never binary frames (auto)"
+    )
+    parser.add_argument(
+        "--pattern", metavar="RE", help="lines that match it are counts: groups forward, reflected, optionally ms"
+    )
+
+
+def add_reading_options(parser: argparse.ArgumentParser) -> None:
+    """What turns counts into readings."""
+    parser.add_argument(
+        "--bridge",
+        action="append",
+        default=[],
+        metavar="FILE",
+        help="bridge file with a fit; may be repeated, files are matched to boards by device_id",
+    )
+    parser.add_argument("--frequency", metavar="F", help="14.1M, 14100k, hertz, or a band such as 20m")
+
+
+def _rate(text: str) -> int:
+    value = int(text) if text.isdigit() else 0
+    if not 300 <= value <= 4_000_000:
+        raise argparse.ArgumentTypeError(f"{text!r} is no rate; wanted baud from 300 to 4000000, usually 115200")
+    return value
+
+
+def at_least_one(text: str) -> int:
+    """A whole number from 1 up, for argparse."""
+    value = int(text) if text.isdigit() else 0
+    if value < 1:
+        raise argparse.ArgumentTypeError(f"{text!r} is no number of readings; wanted a whole number from 1 up")
+    return value
