@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import argparse
 
-__all__ = ["add_reading_options", "add_source_options", "at_least_one"]
+__all__ = ["add_reading_options", "add_source_options", "at_least_one", "positive"]
 
 _SOURCE_HELP = (
     "device path such as /dev/ttyUSB0, file:PATH (a capture or text lines; file:- is standard input), or sim: "
@@ -48,4 +48,15 @@ def at_least_one(text: str) -> int:
     value = int(text) if text.isdigit() else 0
     if value < 1:
         raise argparse.ArgumentTypeError(f"{text!r} is no number of readings; wanted a whole number from 1 up")
+    return value
+
+
+def positive(text: str) -> float:
+    """A number above zero, for argparse."""
+    try:
+        value = float(text)
+    except ValueError:
+        value = 0.0
+    if not 0.0 < value < 1e9:
+        raise argparse.ArgumentTypeError(f"{text!r} is not a number above 0")
     return value

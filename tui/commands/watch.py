@@ -1,0 +1,125 @@
+"""`bridgewright watch`: the live screen, or sentences where a screen cannot be.
+
+One rule: the first picture comes before numpy, files and ports are touched; what goes wrong there ends the screen and
+is said in words.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import sys
+import time
+from typing import TYPE_CHECKING
+
+from tui.commands.options import add_reading_options, add_source_options, positive
+
+if TYPE_CHECKING:
+    from bridgeio.desk import Desk
+    from bridgeio.link import LinkState
+    from bridgeio.ports import Source
+    from bridgeio.receiver import Receiver
+    from tui.alarm import Limits
+    from tui.messages import Feed, Snapshot
+
+__all__ = ["EXAMPLE", "add_arguments", "run"]
+
+EXAMPLE = "bridgewright watch sim:"
+
+_SCREEN_HZ, _PLAIN_HZ = 20.0, 1.0
+
+
+def add_arguments(parser: argparse.ArgumentParser) -> None:
+    """Add watch's options."""
+    add_source_options(parser)
+    add_reading_options(parser)
+    parser.add_argument("--plain", action="store_true", help="one sentence a line instead of a screen")
+    parser.add_argument(
+        "--rate", type=positive, metavar="HZ", help="paints a second on the screen (20), sentences with --plain (1)"
+    )
+    parser.add_argument("--limit-swr", type=positive, metavar="S", help="alarm above this SWR")
+    parser.add_argument("--limit-power", type=positive, metavar="W", help="alarm above this forward power")
+    parser.add_argument("--limit-key", type=positive, metavar="S", help="alarm after this many seconds of key-down")
+
+
+def run(args: argparse.Namespace) -> int:
+    """Show readings until the user quits or, with --plain, until the source ends."""
+    from tui.live_feed import LiveFeed
+    from tui.terminal import terminal
+
+    shown_on = terminal(os.environ, sys.stdout.encoding, sys.stdout.isatty() and sys.stdin.isatty())
+    feed = LiveFeed(lambda: _prepare(args))
+    if args.plain or not shown_on.screen:
+        return _in_sentences(feed, args.rate or _PLAIN_HZ)
+    from tui.app import BridgewrightApp
+
+    app = BridgewrightApp(
+        feed, ascii=shown_on.ascii, color=shown_on.color, limits=_limits(args), rate_hz=args.rate or _SCREEN_HZ
+    )
+    app.run()
+    return app.return_code or 0
+
+
+def _prepare(args: argparse.Namespace) -> tuple[Source, Receiver, Desk]:
+    from bridgeio.ports import open_source
+    from tui.commands.reading import desk_for, receiver_for
+
+    source = open_source(args.source, args.baud)
+    return source, receiver_for(args, source), desk_for(args, source)
+
+
+def _limits(args: argparse.Namespace) -> Limits:
+    from tui.alarm import Limits
+
+    return Limits(swr=args.limit_swr, power_w=args.limit_power, key_down_s=args.limit_key)
+
+
+def _in_sentences(feed: Feed, rate_hz: float) -> int:
+    """A sentence at most every 1/rate s, and one for every change of the link, until the link ends."""
+    import queue
+
+    waiting: queue.SimpleQueue[Snapshot] = queue.SimpleQueue()
+    feed.start(waiting.put)
+    teller = _Teller(rate_hz)
+    try:
+        while not teller.ended:
+            teller.tell(waiting.get())
+    finally:
+        feed.stop()
+    return 0
+
+
+class _Teller:
+    """Says what is new in a snapshot: a change of the link and a note to standard error, readings to output."""
+
+    def __init__(self, rate_hz: float) -> None:
+        self._spacing_s, self._due_s = 1.0 / rate_hz, 0.0
+        self._words: str | None = None
+        self._note: str | None = None
+        self.ended = False
+
+    def tell(self, snapshot: Snapshot) -> None:
+        """Say it. LinkError when the link is lost."""
+        from tui.door import say
+        from tui.plain import line
+
+        if snapshot.note != self._note:
+            self._note = snapshot.note
+            say(snapshot.note or "readings are calibrated again")
+        if snapshot.link is not None:
+            self._tell_link(snapshot.link)
+        if snapshot.reading is not None and time.monotonic() >= self._due_s:
+            self._due_s = time.monotonic() + self._spacing_s
+            say(line(snapshot.reading), sys.stdout)
+            sys.stdout.flush()
+
+    def _tell_link(self, link: LinkState) -> None:
+        from bridgeio.errors import LinkError
+        from tui.door import say
+
+        if link.phase == "lost":
+            raise LinkError(link.words)
+        if link.words != self._words:
+            self._words = link.words
+            say(link.words)
+        self.ended = link.phase == "ended"
