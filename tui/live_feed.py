@@ -58,6 +58,7 @@ class LiveFeed:
         """Read at this frequency [Hz] where the bridge does not tell its own."""
         if self._desk is not None:
             self._desk.frequency_option_hz = hz
+            self._send()
 
     def _on_items(self, items: list[Item], arrival_s: float) -> None:
         assert self._desk is not None

@@ -1,0 +1,283 @@
+"""The screen program: joins a feed, the mailbox, the alarms and the screens.
+
+One rule: nothing waits. The first picture comes before the feed starts, a reading is painted as it arrives, and
+whether it is still alive is judged by a clock of our own, because a dead link sends nothing to notice.
+"""
+
+from __future__ import annotations
+
+import os
+import threading
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any, ClassVar
+
+from textual.app import App
+from textual.binding import Binding, BindingType
+from textual.message import Message
+from textual.theme import Theme
+
+from .alarm import Alarm, AlarmState, KeyClock, Limits
+from .drawing.glyphs import glyphs
+from .mailbox import Delivery, Mailbox
+from .messages import Feed, Snapshot, View
+from .palette import DARK, LIGHT, palette
+from .sample import Sample, Sampler
+from .screens import SCREENS, LiveScreen
+from .screens.help import Help
+from .trail import Trail
+
+__all__ = ["BridgewrightApp", "stale_after_s"]
+
+_PAINTS_PER_READING = 1.5  # the cap on paints lies above the feed's rate, so that jitter delays none
+_TICK_S = 0.25  # clocks and the ageing trail move on without readings
+_FIRST_READING_S = 3.0  # before the first reading, silence is not yet a fault: boards reset when the port opens
+_STALE_S, _STALE_PERIODS = 0.25, 3.0
+_SAME_FREQUENCY = 1e-3  # a smaller change does not begin a new tune-up
+
+
+class BridgewrightApp(App[None]):
+    """Shows the live screens. `feed` is started after the first paint and stopped at the end."""
+
+    CSS_PATH = Path(__file__).with_name("app.tcss")
+    TITLE = "bridgewright"
+    BINDINGS: ClassVar[list[BindingType]] = [
+        Binding("q,ctrl+c", "quit", "quit"),
+        Binding("question_mark", "help", "help"),
+        Binding("d", "toggle_dark", "dark/light"),
+    ]
+
+    class Woken(Message):
+        """Something waits in the mailbox."""
+
+    class Failed(Message):
+        """The feed could not start."""
+
+        def __init__(self, error: Exception) -> None:
+            """`error` is what its start raised."""
+            super().__init__()
+            self.error = error
+
+    def __init__(
+        self,
+        feed: Feed,
+        *,
+        screen: str = "tune-up",
+        ascii: bool = False,
+        color: bool = True,
+        limits: Limits | None = None,
+        rate_hz: float = 20.0,
+        clock: Callable[[], float] = time.monotonic,
+    ) -> None:
+        """`rate_hz` [Hz] is the rate at which the feed sends readings; `clock` [s] must be steady."""
+        with _no_color(not color):
+            super().__init__(ansi_color=None if color else True)
+        self._feed, self._clock, self._color = feed, clock, color
+        self._first_screen = screen
+        self.glyphs = glyphs(ascii)
+        self.limits = limits or Limits()
+        self.mailbox = Mailbox(self._wake, 1.0 / (_PAINTS_PER_READING * rate_hz), clock)
+        self._snapshot = Snapshot()
+        self._alarm, self._key_clock, self._trail = Alarm(self.limits), KeyClock(), Trail()
+        self._sampler = Sampler()
+        self._last: Sample | None = None
+        self._rung: frozenset[str] = frozenset()
+        self._heard_s = clock()
+        self._stopped = False
+        self._failure: Exception | None = None
+        self._watching = False
+        self.use_command_palette = not ascii  # it draws pictures
+
+    def get_default_screen(self) -> LiveScreen:
+        """The screen asked for lies at the bottom of the stack."""
+        screen = SCREENS[self._first_screen]()
+        screen.glyphs, screen.palette = self.glyphs, palette(self._color, dark=True)
+        return screen
+
+    def on_mount(self) -> None:
+        """Set the colours; nothing else is loaded yet."""
+        for theme in _THEMES:
+            self.register_theme(theme)
+        self.theme = _THEMES[0 if self._color else 2].name
+
+    def on_ready(self) -> None:
+        """The first picture stands: start the feed and the clocks."""
+        self._heard_s = self._clock()
+        self._paint()
+        self.set_interval(_TICK_S, self._tick)
+        threading.Thread(target=self._start_feed, name="feed-start", daemon=True).start()
+
+    async def run_async(self, **options: Any) -> None:
+        """Run until the end; the feed is stopped when the terminal is already back to normal.
+
+        What kept the feed from starting is raised here, for the command line to put into words.
+        """
+        try:
+            await super().run_async(**options)
+        finally:
+            self.stop_feed()
+        if self._failure is not None:
+            raise self._failure
+
+    def stop_feed(self) -> None:
+        """Stop the feed, once."""
+        if not self._stopped:
+            self._stopped = True
+            self._feed.stop()
+
+    def set_frequency(self, hz: float) -> None:
+        """Read at this frequency [Hz] from now on."""
+        self._feed.set_frequency(hz)
+
+    def set_limits(self, limits: Limits) -> None:
+        """Use other limits from now on."""
+        self.limits = limits
+        self._alarm.set_limits(limits)
+        self._paint()
+
+    def action_toggle_dark(self) -> None:
+        """Dark to light and back."""
+        if self._color:
+            self.theme = _THEMES[1 if self.current_theme.dark else 0].name
+
+    def action_help(self) -> None:
+        """Keys, symbols, words and cautions."""
+        if not isinstance(self.screen, Help):
+            self.push_screen(Help(not self.glyphs.dots))
+
+    def on_bridgewright_app_failed(self, message: Failed) -> None:
+        """End; the error is raised when the terminal is back to normal."""
+        self._failure = message.error
+        self.exit()
+
+    def on_bridgewright_app_woken(self) -> None:
+        """Paint at once, or at the deadline where the last paint is too short ago."""
+        wait_s = self.mailbox.wait_s()
+        if wait_s <= 0.0:
+            self._collect()
+        else:
+            self.set_timer(wait_s, self._collect)
+
+    def _start_feed(self) -> None:
+        """In a thread of its own: files and ports may take their time, the keys answer all the same."""
+        try:
+            self._feed.start(self.mailbox.put)
+        except Exception as error:  # noqa: BLE001  handed on to `run_async`, which raises it
+            self.post_message(self.Failed(error))
+
+    def _wake(self) -> None:
+        self.post_message(self.Woken())
+
+    def _collect(self) -> None:
+        """Take what waits, judge every reading of it, paint the newest."""
+        delivery = self.mailbox.take()
+        if delivery is None:
+            return
+        self._take_in(delivery)
+        self._paint()
+
+    def _take_in(self, delivery: Delivery) -> None:
+        before, self._snapshot = self._snapshot, delivery.snapshot
+        if _moved(before.frequency_hz, delivery.snapshot.frequency_hz):
+            self._trail.forget()
+        for at_s, reading in delivery.readings:
+            self._last = self._sampler.take(at_s, reading)
+            for listener in (self._alarm, self._key_clock, self._trail):
+                listener.feed(self._last)
+        if delivery.readings and self._last is not None:
+            self._heard_s = self._last.at_s
+            if not self._watching:
+                self._watch_silence()
+
+    def _watch_silence(self) -> None:
+        """Paint when the newest reading has just become old; one timer, set anew only when it has run out."""
+        left_s = self._heard_s + stale_after_s(self._snapshot.period_ms) - self._clock()
+        self._watching = left_s > 0.0
+        if self._watching:
+            self.set_timer(left_s, self._watch_silence)
+        else:
+            self._paint()
+
+    def _tick(self) -> None:
+        """Move clocks on while no reading does it."""
+        if self._clock() - self._heard_s >= _TICK_S:
+            self._paint()
+
+    def _silent(self) -> bool:
+        silent_s = self._clock() - self._heard_s
+        if self._snapshot.reading is None:
+            return silent_s > _FIRST_READING_S
+        return silent_s >= stale_after_s(self._snapshot.period_ms)
+
+    def _paint(self) -> None:
+        """Show the present moment on the screen on top."""
+        view = self._view()
+        if view.stale:
+            self._alarm.lapse()
+        self._ring(frozenset(view.alarm.over))
+        for screen in self.screen_stack[-1:]:  # none is left while the program ends
+            if isinstance(screen, LiveScreen):
+                screen.paint(view)
+
+    def _view(self) -> View:
+        now_s, silent = self._clock(), self._silent()
+        stale = silent or (self._last is not None and "stale" in self._last.flags)
+        key = self._key_clock.state(now_s, stale)
+        alarm = self._alarm.state(self._last, self._snapshot.reading, stale)
+        limit_s = self.limits.key_down_s
+        if key.down and limit_s is not None and key.seconds > limit_s:
+            alarm = AlarmState((*alarm.over, "key down"), alarm.may, alarm.blind)
+        silent_s = now_s - self._heard_s
+        return View(self._snapshot, now_s, silent_s, silent, stale, alarm, self.limits, key, self._trail)
+
+    def _ring(self, over: frozenset[str]) -> None:
+        """One bell for each limit that is newly passed."""
+        if over - self._rung:
+            self.bell()
+        self._rung = over
+
+    def watch_theme(self) -> None:
+        """Dress the screens in the colours of the theme."""
+        for screen in self.screen_stack:
+            if isinstance(screen, LiveScreen):
+                screen.dress(palette(self._color, self.current_theme.dark))
+                screen.redraw()
+
+
+@contextmanager
+def _no_color(wanted: bool) -> Iterator[None]:
+    """Have the library strip, or keep, the colour of its own widgets: it asks NO_COLOR when an app is made."""
+    before = os.environ.pop("NO_COLOR", None)
+    if wanted:
+        os.environ["NO_COLOR"] = "1"
+    try:
+        yield
+    finally:
+        os.environ.pop("NO_COLOR", None)
+        if before is not None:
+            os.environ["NO_COLOR"] = before
+
+
+def stale_after_s(period_ms: float) -> float:
+    """Age [s] from which a reading is stale: three periods [ms] or 250 ms, whichever is longer."""
+    return max(_STALE_S, _STALE_PERIODS * period_ms / 1000.0)
+
+
+def _moved(before_hz: float | None, after_hz: float | None) -> bool:
+    """Whether the frequency is another one, so that the best point means nothing any more."""
+    if before_hz is None or after_hz is None:
+        return False
+    return abs(after_hz - before_hz) > _SAME_FREQUENCY * before_hz
+
+
+def _theme(name: str, ground: str, text: str, accent: str, dark: bool) -> Theme:
+    return Theme(name=name, primary=accent, foreground=text, background=ground, surface=ground, panel=ground, dark=dark)
+
+
+_THEMES = (
+    _theme("shack-dark", DARK.ground, "#d8dee6", "#56b4e9", True),
+    _theme("shack-light", LIGHT.ground, "#1c2126", "#0072b2", False),
+    _theme("shack-plain", "ansi_default", "ansi_default", "ansi_default", True),
+)

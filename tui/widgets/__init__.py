@@ -1,0 +1,1 @@
+"""Widgets: thin shells around the drawing functions."""
