@@ -5,14 +5,15 @@ One rule: everything here was fitted from bench steps or typed by hand; nothing 
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import numpy.typing as npt
 
 from .laws import Law
+from .warmth import DiodeKind
 
-__all__ = ["BAND_REACH", "Band", "Bridge", "band_index"]
+__all__ = ["BAND_REACH", "Band", "Bridge", "band_at"]
 
 Array = npt.NDArray[np.float64]
 
@@ -24,9 +25,9 @@ BAND_REACH = 0.10
 class Band:
     """One calibrated frequency [Hz]: power at a port [W] is the law's square over the gain squared.
 
-    covariance: of (forward law parameters, ln forward gain, reflected law parameters, ln reflected gain), without
+    covariance: of (ln forward gain, ln reflected gain, forward law parameters, reflected law parameters), without
     the reference's own accuracy. Limits are 95 %. angle_cosine: cos(arg d + arg c), the least favourable within its
-    95 % limits, or -1 where no loads behind line have identified it.
+    95 % limits, or -1 where no loads behind line have identified it. interpolated: made from its two neighbours.
     """
 
     frequency_hz: float
@@ -38,11 +39,16 @@ class Band:
     forward_leak_limit: float
     angle_cosine: float = -1.0
     covariance: Array = field(default_factory=lambda: np.zeros((8, 8)))
+    interpolated: bool = False
 
 
 @dataclass(frozen=True, slots=True)
 class Bridge:
-    """A calibrated bridge. Counts run to `full_scale`; sd are of single readings [counts]; limits are 95 %."""
+    """A calibrated bridge. Counts run to `full_scale`; sd are of single readings [counts]; limits are 95 %.
+
+    bands rise in frequency. diode: temperature behaviour, None where nobody has named the diode. temperature_c and
+    temperature_span_c: mean of the bench and its span [degrees Celsius].
+    """
 
     name: str
     full_scale: int
@@ -54,13 +60,48 @@ class Bridge:
     reflected_sd: float = 1.0
     reference_pct: float = 5.0
     device_id: int | None = None
+    diode: DiodeKind | None = None
+    temperature_c: float = 25.0
+    temperature_span_c: float = 0.0
 
 
-def band_index(frequency_hz: npt.ArrayLike, bands: tuple[Band, ...]) -> npt.NDArray[np.intp]:
-    """Index of the nearest band within 10 % of each frequency [Hz], any shape; -1 where there is none (or NaN)."""
-    f = np.asarray(frequency_hz, dtype=float)
-    centres = np.array([band.frequency_hz for band in bands])
-    away = np.abs(f[..., None] / centres - 1.0)
-    nearest = np.argmin(np.where(np.isnan(away), np.inf, away), axis=-1)
-    reached = np.take_along_axis(away, nearest[..., None], axis=-1)[..., 0] <= BAND_REACH
-    return np.where(reached, nearest, -1)
+def band_at(frequency_hz: float, bands: tuple[Band, ...]) -> Band | None:
+    """The band for a frequency [Hz]: the nearest within 10 %; between two, one made of both; else None."""
+    away = [abs(frequency_hz / band.frequency_hz - 1.0) for band in bands]
+    nearest = int(np.argmin(away))
+    if away[nearest] <= BAND_REACH:
+        return bands[nearest]
+    below = [band for band in bands if band.frequency_hz < frequency_hz]
+    above = [band for band in bands if band.frequency_hz > frequency_hz]
+    if not below or not above:
+        return None
+    return _between(max(below, key=_hertz), min(above, key=_hertz), frequency_hz)
+
+
+def _hertz(band: Band) -> float:
+    return band.frequency_hz
+
+
+def _between(low: Band, high: Band, frequency_hz: float) -> Band:
+    """Log gain linear in log frequency; leaks and limits the larger; what the neighbours differ by is uncertainty."""
+    part = float(np.log(frequency_hz / low.frequency_hz) / np.log(high.frequency_hz / low.frequency_hz))
+    covariance = (1.0 - part) * low.covariance + part * high.covariance
+    gains = {}
+    for name, place in (("gain_forward", 0), ("gain_reflected", 1)):
+        first, second = np.log(getattr(low, name)), np.log(getattr(high, name))
+        gains[name] = float(np.exp((1.0 - part) * first + part * second))
+        covariance[place, place] += part * (1.0 - part) * (second - first) ** 2
+    larger = {
+        name: max(getattr(low, name), getattr(high, name))
+        for name in ("directivity", "directivity_limit", "forward_leak", "forward_leak_limit")
+    }
+    worst = min(low.angle_cosine, high.angle_cosine)
+    return replace(
+        low,
+        frequency_hz=frequency_hz,
+        angle_cosine=worst,
+        covariance=covariance,
+        interpolated=True,
+        **gains,
+        **larger,
+    )

@@ -15,9 +15,9 @@ import numpy.typing as npt
 from .bench import BenchRatings, BenchStep
 from .bridge import Bridge
 from .errors import SheetError
-from .fit_model import LAW_SIZE, BenchModel
+from .fit_model import BenchModel
 from .fit_start import start_vectors
-from .laws import DiodeLaw
+from .laws import LAWS
 from .leak_limits import band_of_fit, with_neighbours
 from .units import power_from_volts_w
 
@@ -57,25 +57,27 @@ def fit(
     name: str,
     full_scale: int,
     z0_ohm: float = 50.0,
+    detector: str = "diode",
     ratings: BenchRatings | None = None,
     match_return_loss_db: float | None = None,
     device_id: int | None = None,
 ) -> Fit:
-    """Fit laws, gains and leakage of a bridge with diode detectors to bench steps.
+    """Fit laws, gains and leakage of a bridge with detectors of one kind (a name in LAWS) to bench steps.
 
     SheetError where the steps cannot carry a fit at all, UnitError where a load cannot be read.
     """
     ratings = ratings or BenchRatings()
     usable = [_with_power(step, z0_ohm) for step in steps]
     _demand(usable)
-    model = BenchModel(usable, ratings, z0_ohm)
+    model = BenchModel(usable, ratings, z0_ohm, LAWS[detector])
     vector, covariance = _solve(model)
+    forward, reflected = model.laws(vector)
     found = [band_of_fit(model, vector, covariance, band, match_return_loss_db) for band in range(len(model.bands))]
     bridge = Bridge(
         name=name,
         full_scale=full_scale,
-        forward_law=DiodeLaw.from_parameters(vector[:LAW_SIZE]),
-        reflected_law=DiodeLaw.from_parameters(vector[LAW_SIZE : 2 * LAW_SIZE]),
+        forward_law=forward,
+        reflected_law=reflected,
         bands=with_neighbours([band for band, _ in found], [known for _, known in found]),
         z0_ohm=z0_ohm,
         forward_sd=_typical([s.forward_sd for s in steps]),
@@ -128,17 +130,22 @@ def _dark_mean(steps: list[BenchStep]) -> float:
 
 
 def _solve(model: BenchModel) -> tuple[Array, Array]:
-    """Best vector over all starts, and its covariance."""
+    """Best vector over all starts, and its covariance; the laws of `model` are refined on the way."""
     best = min((_descend(model, start) for start in start_vectors(model)), key=lambda found: found[1])[0]
-    for _ in range(3):
-        scatter = _scatter(model, best)
-        settled = abs(scatter - model.scatter) < 0.02 * model.scatter
-        model.scatter = scatter
+    for _ in range(4):
+        before, open_db = model.scatter, model.refine_laws(best)
+        model.scatter = _scatter(model, best)
         best = _descend(model, best)[0]
-        if settled:
+        if abs(model.scatter - before) < 0.02 * before:
             break
     jacobian = _jacobian(model.residuals)(best)
-    return best, np.asarray(np.linalg.inv(jacobian.T @ jacobian), dtype=float)
+    covariance = np.asarray(np.linalg.inv(jacobian.T @ jacobian), dtype=float)
+    # What a law does not follow moves its powers like a gain, each side for itself.
+    for band in range(len(model.bands)):
+        for side, db in enumerate(open_db):
+            place = model.band_slice(band).start + side
+            covariance[place, place] += (db * np.log(10.0) / 20.0) ** 2
+    return best, covariance
 
 
 def _descend(model: BenchModel, start: Array) -> tuple[Array, float]:

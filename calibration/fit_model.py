@@ -17,28 +17,26 @@ import numpy.typing as npt
 
 from .bench import STEP_KINDS, BenchRatings, BenchStep
 from .bridge import BAND_REACH
-from .laws import DiodeLaw
+from .errors import SheetError
+from .laws import Law
 from .loads import load_impedance_ohm, load_reflection, part_of
 from .meter import counting_sd
 from .reflection import rho_from_return_loss
 
-__all__ = ["LAW_SIZE", "BenchModel", "group_bands"]
+__all__ = ["BenchModel", "group_bands"]
 
 Array = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
 
-LAW_SIZE = 3
 #: Per band: ln k_f, ln k_r, d, c and the dummy's reflection as real and imaginary part, own loss [dB].
 BAND_SIZE = 9
+_DB = 10.0 / np.log(10.0)
 #: Counts are not believed beyond this part of themselves: no law follows a detector further.
 COUNT_PART = 5e-4
 
 # Priors (mean, sd): wide enough that a usable bench overrules them, narrow enough that what it leaves open stays
-# physical. A leak of 0.1 is a directivity of 20 dB; the load term of diodes in use spans 0.05 to 50.
+# physical. A leak of 0.1 is a directivity of 20 dB.
 _LEAK_SD = 0.1
-_LOAD_TERM = (np.log(1.5), 1.5)
-#: Two diodes of one type: ln scale and ln load term of the reflected law against the forward one.
-_SAME_TYPE_SD = (0.15, 0.5)
 #: ln of reflected over forward gain: both sides of a coupler are usually built alike (common practice).
 _BALANCE_SD = 0.35
 #: The bridge's own loss between the reflected detector and the wattmeter [dB] (a 20-30 dB coupler; common practice).
@@ -64,8 +62,11 @@ class BenchModel:
     Vectors have shape (..., size): many are evaluated at once, which is what makes the fit's Jacobian cheap.
     """
 
-    def __init__(self, steps: list[BenchStep], ratings: BenchRatings, z0_ohm: float) -> None:
-        """Sort `steps` into bands, load parts and lines. UnitError where a load cannot be read."""
+    def __init__(self, steps: list[BenchStep], ratings: BenchRatings, z0_ohm: float, kind: type[Law]) -> None:
+        """Sort `steps` into bands, load parts and lines, and find first laws of `kind`.
+
+        UnitError where a load cannot be read, SheetError where the powers do not carry such a law.
+        """
         self.steps = steps
         self.ratings = ratings
         self.z0_ohm = z0_ohm
@@ -89,6 +90,8 @@ class BenchModel:
             np.array([float(counting_sd(getattr(s, sd), s.samples)) for s in steps])
             for sd in ("forward_sd", "reflected_sd")
         ]
+        self.first_laws = self._first_laws(kind)
+        self._law_sizes = [len(law.parameters) for law in self.first_laws]
 
     @property
     def size(self) -> int:
@@ -97,12 +100,36 @@ class BenchModel:
 
     def band_slice(self, band: int) -> slice:
         """Where band `band` has its parameters."""
-        start = 2 * LAW_SIZE + BAND_SIZE * band
+        start = self._bands_at + BAND_SIZE * band
         return slice(start, start + BAND_SIZE)
 
-    def laws(self, vectors: Array) -> tuple[DiodeLaw, DiodeLaw]:
-        """Forward and reflected law of vectors, their parameters of shape (..., 1) to go with steps."""
-        return DiodeLaw.stacked(vectors[..., :LAW_SIZE]), DiodeLaw.stacked(vectors[..., LAW_SIZE : 2 * LAW_SIZE])
+    def law_slice(self, side: int) -> slice:
+        """Where the forward (0) or reflected (1) law has its parameters."""
+        start = side * self._law_sizes[0]
+        return slice(start, start + self._law_sizes[side])
+
+    def laws(self, vectors: Array) -> tuple[Law, Law]:
+        """Forward and reflected law of one vector, or of many; then they broadcast with steps."""
+        forward, reflected = self.first_laws
+        return (
+            forward.with_parameters(vectors[..., self.law_slice(0)]),
+            reflected.with_parameters(vectors[..., self.law_slice(1)]),
+        )
+
+    def refine_laws(self, vector: Array) -> tuple[float, float]:
+        """Let the laws follow what the fit left over at known powers; returns what is still open [dB, sd] of each."""
+        laws, left = list(self.laws(vector)), []
+        _, _, dummy = self.leaks(vector, self.band[self.of_kind["power"]])
+        incident, _ = self._incident(vector, self.of_kind["power"], dummy, laws[0])
+        through, _ = self._through(vector, laws[1])
+        for side, (kind, seen_w) in enumerate((("power", incident), ("reversed", through))):
+            at = self.of_kind[kind]
+            off_db = _DB * np.log(self._power[at] / seen_w)
+            counts = (self._forward, self._reflected)[side][at]
+            laws[side], open_db = laws[side].refined(counts, off_db, _DB * self.scatter)
+            left.append(open_db)
+        self.first_laws = (laws[0], laws[1])
+        return left[0], left[1]
 
     def leaks(self, vectors: Array, bands: npt.NDArray[np.intp]) -> tuple[Complex, Complex, Complex]:
         """Complex d, c and dummy reflection in each of `bands`, shape (..., len(bands))."""
@@ -153,58 +180,93 @@ class BenchModel:
         seen: dict[int, list[float]] = {}
         for step in self.of_kind["reversed"]:
             at = int(self._band_at(self.band[step]))
-            little = float(forward.square(self._forward[step])[0]) / float(np.exp(2.0 * vector[at]))
-            whole = float(reflected.square(self._reflected[step])[0]) / float(np.exp(2.0 * vector[at + 1]))
+            little = float(forward.square(self._forward[step])) / float(np.exp(2.0 * vector[at]))
+            whole = float(reflected.square(self._reflected[step])) / float(np.exp(2.0 * vector[at + 1]))
             seen.setdefault(int(self.band[step]), []).append(max(little, 0.0) / whole)
         return {band: float(np.sqrt(np.mean(ratios))) for band, ratios in seen.items()}
 
     def _forward_steps(
-        self, vectors: Array, at: npt.NDArray[np.intp], gamma: Complex, forward: DiodeLaw, reflected: DiodeLaw
+        self, vectors: Array, at: npt.NDArray[np.intp], gamma: Complex, forward: Law, reflected: Law
     ) -> tuple[Array, Array]:
         """Residuals of steps in which the forward detector supplies the power: wattmeter's and reflected count's."""
-        d, c, _ = self.leaks(vectors, self.band[at])
+        d = self.leaks(vectors, self.band[at])[0]
         gains = self._band_at(self.band[at])
-        square = np.maximum(forward.square(self._forward[at]), 1e-12)
-        incident = square / np.exp(2.0 * vectors[..., gains]) / np.abs(1.0 + c * gamma) ** 2
-        noise = forward.slope(self._forward[at]) * self._count_sd(0, at, self._forward[at]) / square
-        seen = incident * np.exp(2.0 * vectors[..., gains + 1]) * np.abs(gamma + d) ** 2
-        count = reflected.counts(seen)
-        # The forward count's own noise moves the power it supplies, and so the count expected here.
-        moved = noise * seen / reflected.slope(count)
-        counts = (self._reflected[at] - count) / np.hypot(self._count_sd(1, at, count), moved)
-        return self._wattmeter(at, incident, noise), counts
+        incident, noise = self._incident(vectors, at, gamma, forward)
+        expected = incident * np.exp(2.0 * vectors[..., gains + 1]) * np.abs(gamma + d) ** 2
+        # Compared as powers, in which the reflected law is asked one way only. The forward count's own noise moves
+        # the power it supplies, and so what is expected here.
+        sd = np.hypot(reflected.slope(self._reflected[at]) * self._count_sd(1, at), noise * expected)
+        reflections = (reflected.square(self._reflected[at]) - expected) / sd
+        known = reflected.covers(self._reflected[at]) & forward.covers(self._forward[at])
+        return self._wattmeter(at, incident, noise), np.where(known, reflections, 0.0)
 
-    def _reversed_steps(self, vectors: Array, reflected: DiodeLaw) -> Array:
+    def _incident(self, vectors: Array, at: npt.NDArray[np.intp], gamma: Complex, forward: Law) -> tuple[Array, Array]:
+        """Power [W] of steps as the forward detector saw it, and its relative sd by counting."""
+        c = self.leaks(vectors, self.band[at])[1]
+        square = np.maximum(forward.square(self._forward[at]), 1e-12)
+        gain = np.exp(2.0 * vectors[..., self._band_at(self.band[at])])
+        noise = forward.slope(self._forward[at]) * self._count_sd(0, at) / square
+        return square / gain / np.abs(1.0 + c * gamma) ** 2, noise
+
+    def _through(self, vectors: Array, reflected: Law) -> tuple[Array, Array]:
+        """Power [W] at the wattmeter of reversed steps as the reflected detector saw it, and its relative sd."""
         at = self.of_kind["reversed"]
         gains = self._band_at(self.band[at])
         square = np.maximum(reflected.square(self._reflected[at]), 1e-12)
-        noise = reflected.slope(self._reflected[at]) * self._count_sd(1, at, self._reflected[at]) / square
+        noise = reflected.slope(self._reflected[at]) * self._count_sd(1, at) / square
         lost = 10.0 ** (-vectors[..., gains + 8] / 10.0)
-        return self._wattmeter(at, square / np.exp(2.0 * vectors[..., gains + 1]) * lost, noise)
+        return square / np.exp(2.0 * vectors[..., gains + 1]) * lost, noise
 
-    def _dark_steps(self, forward: DiodeLaw, reflected: DiodeLaw) -> tuple[Array, Array]:
+    def _reversed_steps(self, vectors: Array, reflected: Law) -> Array:
+        return self._wattmeter(self.of_kind["reversed"], *self._through(vectors, reflected))
+
+    def _dark_steps(self, forward: Law, reflected: Law) -> tuple[Array, Array]:
         at = self.of_kind["dark"]
         return (
-            (self._forward[at] - forward.offset) / self._count_sd(0, at, np.zeros(1)),
-            (self._reflected[at] - reflected.offset) / self._count_sd(1, at, np.zeros(1)),
+            (self._forward[at] - forward.offset) / self._sds[0][at],
+            (self._reflected[at] - reflected.offset) / self._sds[1][at],
         )
 
     def _wattmeter(self, at: npt.NDArray[np.intp], seen_w: Array, noise: Array) -> Array:
         return np.asarray(np.log(seen_w / self._power[at]) / np.hypot(self.scatter, noise))
 
-    def _count_sd(self, channel: int, at: npt.NDArray[np.intp], count: Array) -> Array:
-        return np.asarray(np.hypot(self._sds[channel][at], COUNT_PART * count))
+    def _count_sd(self, channel: int, at: npt.NDArray[np.intp]) -> Array:
+        counts = (self._forward, self._reflected)[channel][at]
+        return np.asarray(np.hypot(self._sds[channel][at], COUNT_PART * counts))
+
+    def _first_laws(self, kind: type[Law]) -> tuple[Law, Law]:
+        dark = self.of_kind["dark"]
+        found = []
+        for step_kind, counts in (("power", self._forward), ("reversed", self._reflected)):
+            at = self.of_kind[step_kind]
+            found.append(kind.start(counts[at], self._power[at], self.band[at], float(np.mean(counts[dark]))))
+        forward, reflected = found
+        if forward is None:
+            raise SheetError(
+                "the power steps do not carry such a detector law: wanted more powers, further apart, into the dummy"
+            )
+        if reflected is None and np.isinf(forward.likeness()).all():
+            raise SheetError(
+                "the reversed steps do not carry a table law: wanted at least 4, as widely spread in power as the "
+                "power steps; the reflected detector's table cannot be had from the forward one's"
+            )
+        alike = np.concatenate([[np.mean(self._reflected[dark])], forward.parameters[1:]])
+        return forward, forward.with_parameters(alike) if reflected is None else reflected
 
     def _band_of(self, step: BenchStep) -> int:
         hz = step.frequency_hz
         return -1 if hz is None else int(np.argmin([abs(np.log(hz / centre)) for centre in self.bands]))
 
     def _band_at(self, bands: npt.NDArray[np.intp]) -> npt.NDArray[np.intp]:
-        return np.asarray(2 * LAW_SIZE + BAND_SIZE * bands)
+        return np.asarray(self._bands_at + BAND_SIZE * bands)
+
+    @property
+    def _bands_at(self) -> int:
+        return sum(self._law_sizes)
 
     @property
     def _parts_at(self) -> int:
-        return 2 * LAW_SIZE + BAND_SIZE * len(self.bands)
+        return self._bands_at + BAND_SIZE * len(self.bands)
 
     @property
     def _lines_at(self) -> int:
@@ -217,7 +279,11 @@ class BenchModel:
         mean, sd = self.priors
         held = np.isfinite(sd)
         own = ((vectors - mean) / np.where(held, sd, 1.0))[..., held]
-        alike = (vectors[..., LAW_SIZE + 1 : 2 * LAW_SIZE] - vectors[..., 1:LAW_SIZE]) / _SAME_TYPE_SD
+        sd = self.first_laws[0].likeness()
+        told = np.flatnonzero(np.isfinite(sd))
+        # Laws that say nothing of each other may differ in size: `told` is then empty, and so is what is taken.
+        forward, reflected = (vectors[..., self.law_slice(side).start + told] for side in (0, 1))
+        alike = (reflected - forward) / sd[told]
         gains = self._band_at(np.arange(len(self.bands)))
         balance = (vectors[..., gains + 1] - vectors[..., gains]) / _BALANCE_SD
         return np.concatenate([own, alike, balance], axis=-1)
@@ -226,7 +292,8 @@ class BenchModel:
     def priors(self) -> tuple[Array, Array]:
         """Mean and sd of every parameter's prior; sd is infinite where there is none."""
         mean, sd = np.zeros(self.size), np.full(self.size, np.inf)
-        mean[2], sd[2] = _LOAD_TERM
+        for side, law in enumerate(self.first_laws):
+            mean[self.law_slice(side)], sd[self.law_slice(side)] = law.priors()
         for band in range(len(self.bands)):
             at = self.band_slice(band).start
             sd[at + 2 : at + 6] = _LEAK_SD

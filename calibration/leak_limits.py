@@ -13,7 +13,7 @@ import numpy.typing as npt
 
 from .bridge import Band
 from .directivity import NORMAL_DEVIATE, seen_directivity_limit
-from .fit_model import LAW_SIZE, BenchModel
+from .fit_model import BenchModel
 from .reflection import rho_from_return_loss
 
 __all__ = ["band_of_fit", "with_neighbours"]
@@ -36,7 +36,8 @@ def band_of_fit(
         seen_directivity_limit(seen + NORMAL_DEVIATE * _seen_sd(d + dummy, covariance, at), model.dummy_limit)
     )
     by_loads = _outer_limit(d, covariance[at + 2 : at + 4, at + 2 : at + 4])
-    own = [*range(LAW_SIZE), at, *range(LAW_SIZE, 2 * LAW_SIZE), at + 1]
+    laws = [range(model.law_slice(side).start, model.law_slice(side).stop) for side in (0, 1)]
+    own = [at, at + 1, *laws[0], *laws[1]]
     return Band(
         frequency_hz=model.bands[band],
         gain_forward=float(np.exp(vector[at])),

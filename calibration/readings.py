@@ -13,13 +13,15 @@ import numpy as np
 import numpy.typing as npt
 
 from . import flags as flag
-from .directivity import rho_interval, spread_quantile
+from .directivity import NORMAL_DEVIATE, hard_bound, rho_interval, spread_quantile
 from .reflection import return_loss_db, swr_from_rho
 
 __all__ = ["COLUMNS", "Readings", "Terms"]
 
 Array = npt.NDArray[np.float64]
 
+#: In a hard bound the converter's noise stands at its 95 % limit, beside everything else.
+_MOST = NORMAL_DEVIATE
 #: The columns a meter hands over; all others follow from them.
 COLUMNS = ("forward_counts", "reflected_counts", "frequency_hz", "forward_w", "reflected_w", "rho")
 
@@ -48,6 +50,13 @@ class Terms:
         """The same terms for some of the n readings."""
         return Terms(*(getattr(self, column.name)[:, rows] for column in fields(self)))
 
+    @classmethod
+    def joined(cls, several: list[Terms]) -> Terms:
+        """Several looks at the same readings as one, their intervals to be joined."""
+        if len(several) == 1:
+            return several[0]
+        return cls(*(np.concatenate([getattr(one, column.name) for one in several]) for column in fields(cls)))
+
 
 class Readings:
     """n readings. Columns are float64[n], `flags` uint32[n] (see `calibration.flags`)."""
@@ -59,12 +68,24 @@ class Readings:
     reflected_w: Array
     rho: Array
 
-    def __init__(self, columns: dict[str, Array], flags: npt.NDArray[np.uint32], terms: Terms) -> None:
-        """Hold what `Meter.read` computed; `columns` has the names of COLUMNS."""
+    def __init__(
+        self,
+        columns: dict[str, Array],
+        flags: npt.NDArray[np.uint32],
+        terms: Terms,
+        *,
+        beyond_open: npt.NDArray[np.bool_],
+        hard: bool = False,
+    ) -> None:
+        """Hold what `Meter.read` computed; `columns` has the names of COLUMNS.
+
+        beyond_open: where more came back than even an open load returns. hard: bounds in place of 95 % intervals.
+        """
         for name in COLUMNS:
             setattr(self, name, columns[name])
         self.flags = flags
-        self._terms = terms
+        self.beyond_open = beyond_open
+        self._terms, self._hard = terms, hard
 
     def __len__(self) -> int:
         """How many readings."""
@@ -75,7 +96,9 @@ class Readings:
         at = range(len(self))[index]
         rows = slice(at, at + 1)
         columns = {name: getattr(self, name)[rows] for name in COLUMNS}
-        return Readings(columns, self.flags[rows], self._terms.at(rows))
+        return Readings(
+            columns, self.flags[rows], self._terms.at(rows), beyond_open=self.beyond_open[rows], hard=self._hard
+        )
 
     def has(self, name: str) -> npt.NDArray[np.bool_]:
         """Where the flag `name` is set, bool[n]."""
@@ -159,7 +182,12 @@ class Readings:
     @cached_property
     def _rho(self) -> tuple[Array, Array]:
         t = self._terms
-        low, high = rho_interval(t.ratio_low, t.ratio_high, t.ratio_noise, t.directivity, t.leak, t.angle_cosine)
+        if self._hard:
+            lowest, highest = (t.ratio_low - _MOST * t.ratio_noise, t.ratio_high + _MOST * t.ratio_noise)
+            low, _ = hard_bound(np.sqrt(np.maximum(lowest, 0.0)), t.directivity, t.leak)
+            _, high = hard_bound(np.sqrt(np.maximum(highest, 0.0)), t.directivity, t.leak)
+        else:
+            low, high = rho_interval(t.ratio_low, t.ratio_high, t.ratio_noise, t.directivity, t.leak, t.angle_cosine)
         return _finite(np.fmin.reduce(low, axis=0)), _finite(np.fmax.reduce(high, axis=0))
 
     @cached_property
@@ -167,7 +195,10 @@ class Readings:
         """P from F = P |1 + c G|^2: 1 + c^2 rho^2 with a swing of 2 c rho over the load's angle."""
         t = self._terms
         reach = t.leak * self._passive_high
-        swing, _ = spread_quantile(2.0 * reach, t.forward_noise)
+        if self._hard:
+            swing = 2.0 * reach + _MOST * t.forward_noise
+        else:
+            swing, _ = spread_quantile(2.0 * reach, t.forward_noise)
         level = 1.0 + reach * reach
         with np.errstate(divide="ignore", invalid="ignore"):
             low = t.forward_low_w / (level + swing)

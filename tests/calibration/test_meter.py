@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from calibration.bridge import Band, Bridge, band_index
+from calibration.bridge import Band, Bridge, band_at
 from calibration.flags import names
 from calibration.laws import DiodeLaw
 from calibration.meter import Meter, counting_sd, uncalibrated
@@ -134,7 +134,9 @@ def test_frequency_decides_the_band():
         known = two.read(forward, reflected, frequency_hz=hz)
         assert hull.swr_low[0] <= known.swr_low[0]
         assert hull.swr_high[0] >= known.swr_high[0]
-    assert band_index([7.0e6, 10.0e6, np.nan], two.bridge.bands).tolist() == [0, -1, -1]
+    assert band_at(7.0e6, two.bridge.bands) is two.bridge.bands[0]
+    assert band_at(6.0e6, two.bridge.bands) is None
+    assert band_at(16.0e6, two.bridge.bands) is None
 
 
 def test_one_call_equals_one_by_one():

@@ -12,8 +12,17 @@ from calibration.errors import UnitError
 
 @pytest.mark.parametrize(
     ("text", "hz"),
-    [("14.1M", 14.1e6), ("14100k", 14.1e6), ("14100000", 14.1e6), ("14_100_000", 14.1e6), ("14.1 MHz", 14.1e6)]
-    + [("20m", 14.175e6), ("6M", 6e6), ("160m", 1.9e6), ("1.85M", 1.85e6)],
+    [
+        ("14.1M", 14100000.0),
+        ("14100k", 14100000.0),
+        ("14100000", 14100000.0),
+        ("14_100_000", 14100000.0),
+        ("14.1 MHz", 14100000.0),
+        ("20m", 14175000.0),
+        ("6M", 6000000.0),
+        ("160m", 1900000.0),
+        ("1.85M", 1850000.0),
+    ],
 )
 def test_frequency_forms(text, hz):
     """All forms a person types are read; 20m is a band, 6M are megahertz."""
@@ -64,8 +73,9 @@ def test_power_from_volts():
         (47.93, 45.0, 51.0, "48"),
         (1.4237, 1.42, 1.43, "1.424"),
         (1234.0, 900.0, 1500.0, "1200"),
-    ]
-    + [(math.nan, 1.0, 2.0, "-"), (-0.0004, -0.1, 0.1, "0.0")],
+        (math.nan, 1.0, 2.0, "-"),
+        (-0.0004, -0.1, 0.1, "0.0"),
+    ],
 )
 def test_shown_digits_follow_the_interval(value, low, high, text):
     """A value is shown to 10^floor(log10(half its interval)), not finer."""
