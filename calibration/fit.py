@@ -20,6 +20,7 @@ from .fit_start import start_vectors
 from .laws import LAWS
 from .leak_limits import band_of_fit, with_neighbours
 from .units import power_from_volts_w
+from .warmth import DiodeKind
 
 __all__ = ["Fit", "StepResidual", "fit"]
 
@@ -61,6 +62,7 @@ def fit(
     ratings: BenchRatings | None = None,
     match_return_loss_db: float | None = None,
     device_id: int | None = None,
+    diode: DiodeKind | None = None,
 ) -> Fit:
     """Fit laws, gains and leakage of a bridge with detectors of one kind (a name in LAWS) to bench steps.
 
@@ -84,6 +86,9 @@ def fit(
         reflected_sd=_typical([s.reflected_sd for s in steps]),
         reference_pct=_reference_pct(usable, ratings),
         device_id=device_id,
+        diode=diode,
+        temperature_c=float(np.mean([s.temperature_c for s in steps])),
+        temperature_span_c=float(np.ptp([s.temperature_c for s in steps])),
     )
     sigmas = model.residuals(vector)[: len(model.residual_steps)]
     residuals = tuple(

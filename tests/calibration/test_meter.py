@@ -180,3 +180,68 @@ def test_counting_sd_keeps_the_converters_steps():
     """A mean of many readings is no better than the steps allow where the noise is too small to dither them."""
     assert counting_sd(0.8, 10000) == pytest.approx(0.008, rel=0.02)
     assert counting_sd(0.0, 10000) == pytest.approx(1 / np.pi)
+
+
+def test_between_bands_a_reading_is_made_of_both_and_wider():
+    """Between two bands the gain lies between, limits are the larger, the reading is flagged and no narrower."""
+    low = Band(7.0e6, 16.0, 16.5, 0.02, 0.03, 0.02, 0.03)
+    high = Band(14.0e6, 18.0, 18.0, 0.04, 0.05, 0.01, 0.02)
+    law = DiodeLaw(5.0, 20.0, 2.0)
+    meter = Meter(Bridge("two", 4095, law, law, (low, high), forward_sd=0.8, reflected_sd=0.8))
+    between = band_at(10.0e6, (low, high))
+    assert between.interpolated
+    assert 16.0 < between.gain_forward < 18.0
+    assert (between.directivity_limit, between.forward_leak_limit) == (0.05, 0.03)
+    assert np.log(between.gain_forward) == pytest.approx(
+        np.interp(np.log(10.0), np.log([7.0, 14.0]), np.log([16.0, 18.0]))
+    )
+    frequencies = np.array([7.0e6, 10.0e6, 14.0e6, 10.0e6, 20.0e6])
+    readings = meter.read(np.full(5, 900.0), np.full(5, 300.0), frequency_hz=frequencies)
+    flagged = [names(bits) for bits in readings.flags]
+    assert flagged == [(), ("interpolated",), (), ("interpolated",), ("uncalibrated",)]
+    assert readings.swr_low[1] < min(readings.swr_low[0], readings.swr_low[2])
+    assert readings.forward_low_w[1] < readings.forward_w[2] < readings.forward_high_w[1]
+
+
+def test_swapped_needs_two_readings_in_a_row():
+    """More back than even an open returns, twice in a row, also across two calls: `swapped`, never by one alone."""
+    leak = {"directivity": 0.03, "directivity_limit": 0.05, "forward_leak": 0.02, "forward_leak_limit": 0.04}
+    meter = Meter(plain_bridge(**leak))
+    forward, reflected = counts(10.0), counts(1.0)
+    turned = meter.read([forward, reflected, reflected], [reflected, forward, forward], frequency_hz=14.1e6)
+    assert ["swapped" in names(bits) for bits in turned.flags] == [False, False, True]
+    one = meter.read(reflected, forward, frequency_hz=14.1e6)
+    assert "swapped" not in names(one.flags[0])
+    two = meter.read(reflected, forward, frequency_hz=14.1e6, after=one)
+    assert "swapped" in names(two.flags[0])
+
+
+def test_hard_bound_is_never_narrower():
+    """With the same parts in both, the hard bound holds the 95 % interval, for SWR and for power."""
+    loads = shed.table("shed_loads")
+    meter = Meter(shed.fitted(12).bridge)
+    soft, hard = (
+        meter.read(
+            loads["forward_12"], loads["reflected_12"], frequency_hz=loads["frequency_hz"], samples=50, hard=hard
+        )
+        for hard in (False, True)
+    )
+    assert (hard.rho_low <= soft.rho_low + 1e-9).all()
+    assert (hard.rho_high >= soft.rho_high - 1e-9).all()
+    assert (hard.forward_low_w <= soft.forward_low_w + 1e-9).all()
+    assert (hard.forward_high_w >= soft.forward_high_w - 1e-9).all()
+
+
+def test_moved_dark_count_widens_and_a_new_zero_corrects():
+    """A dark count moved by 4 counts: flagged, the interval holds the truth; as a new zero it reads right."""
+    meter = Meter(plain_bridge())
+    forward, reflected = counts(10.0) + 4.0, counts(0.01) + 4.0
+    plain = meter.read(forward, reflected, frequency_hz=14.1e6, samples=200)
+    told = meter.read(forward, reflected, frequency_hz=14.1e6, samples=200, moved_zero=(9.0, 9.0))
+    assert "dark-moved" in names(told.flags[0])
+    truth = 10 ** (-30 / 20)
+    assert not plain.rho_low[0] <= truth <= plain.rho_high[0]
+    assert told.rho_low[0] <= truth <= told.rho_high[0]
+    assert told.rho[0] == plain.rho[0]
+    live = meter.read(forward, reflected, frequency_hz=14.1e6, samples=200, zero=(9.0, 9.0))
+    assert live.rho[0] == pytest.approx(truth, rel=1e-3)
