@@ -27,6 +27,7 @@ __all__ = ["BenchModel", "group_bands"]
 
 Array = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
+Places = npt.NDArray[np.intp]
 
 #: Per band: ln k_f, ln k_r, d, c and the dummy's reflection as real and imaginary part, own loss [dB].
 BAND_SIZE = 9
@@ -81,8 +82,7 @@ class BenchModel:
         self._part = np.array([self.parts.index(part_of(s, ratings)) for s in loads], dtype=int)
         self._line = np.array([self.lines.index(self._line_of(s)) if s.line_deg else -1 for s in loads], dtype=int)
         self._impedance = np.array([load_impedance_ohm(s.load or "") for s in loads], dtype=complex)
-        self._forward = np.array([s.forward for s in steps])
-        self._reflected = np.array([s.reflected for s in steps])
+        self._counts = [np.array([s.forward for s in steps]), np.array([s.reflected for s in steps])]
         self._hz = np.array([s.frequency_hz or np.nan for s in steps])
         self._power = np.array([np.nan if s.power_w is None else s.power_w for s in steps])
         self._line_deg = np.array([s.line_deg for s in steps])
@@ -120,18 +120,17 @@ class BenchModel:
         """Let the laws follow what the fit left over at known powers; returns what is still open [dB, sd] of each."""
         laws, left = list(self.laws(vector)), []
         _, _, dummy = self.leaks(vector, self.band[self.of_kind["power"]])
-        incident, _ = self._incident(vector, self.of_kind["power"], dummy, laws[0])
-        through, _ = self._through(vector, laws[1])
+        incident, _ = self._incident(vector, self.of_kind["power"], dummy)
+        through, _ = self._through(vector)
         for side, (kind, seen_w) in enumerate((("power", incident), ("reversed", through))):
             at = self.of_kind[kind]
             off_db = _DB * np.log(self._power[at] / seen_w)
-            counts = (self._forward, self._reflected)[side][at]
-            laws[side], open_db = laws[side].refined(counts, off_db, _DB * self.scatter)
+            laws[side], open_db = laws[side].refined(self._counts[side][at], off_db, _DB * self.scatter)
             left.append(open_db)
         self.first_laws = (laws[0], laws[1])
         return left[0], left[1]
 
-    def leaks(self, vectors: Array, bands: npt.NDArray[np.intp]) -> tuple[Complex, Complex, Complex]:
+    def leaks(self, vectors: Array, bands: Places) -> tuple[Complex, Complex, Complex]:
         """Complex d, c and dummy reflection in each of `bands`, shape (..., len(bands))."""
         at = self._band_at(bands)
         re, im = [2, 4, 6], [3, 5, 7]
@@ -158,14 +157,15 @@ class BenchModel:
 
     def residuals(self, vectors: Array) -> Array:
         """All residuals, each over its sd, shape (..., m): in the order of `residual_steps`, then the priors'."""
-        forward, reflected = self.laws(vectors)
         loads = self.of_kind["load"]
         _, _, dummy = self.leaks(vectors, self.band[self.of_kind["power"]])
-        power, counts = self._forward_steps(vectors, self.of_kind["power"], dummy, forward, reflected)
-        _, load_counts = self._forward_steps(vectors, loads, self.load_reflections(vectors), forward, reflected)
-        turned = self._reversed_steps(vectors, reflected)
-        dark = self._dark_steps(forward, reflected)
-        return np.concatenate([*dark, power, counts, turned, load_counts, self._prior_residuals(vectors)], axis=-1)
+        power, reflections = self._forward_steps(vectors, self.of_kind["power"], dummy)
+        _, load_reflections = self._forward_steps(vectors, loads, self.load_reflections(vectors))
+        turned = self._wattmeter(self.of_kind["reversed"], *self._through(vectors))
+        priors = self._prior_residuals(vectors)
+        return np.concatenate(
+            [*self._dark_steps(vectors), power, reflections, turned, load_reflections, priors], axis=-1
+        )
 
     @property
     def residual_steps(self) -> list[tuple[int, str]]:
@@ -180,66 +180,73 @@ class BenchModel:
         seen: dict[int, list[float]] = {}
         for step in self.of_kind["reversed"]:
             at = int(self._band_at(self.band[step]))
-            little = float(forward.square(self._forward[step])) / float(np.exp(2.0 * vector[at]))
-            whole = float(reflected.square(self._reflected[step])) / float(np.exp(2.0 * vector[at + 1]))
+            little = float(forward.square(self._counts[0][step])) / float(np.exp(2.0 * vector[at]))
+            whole = float(reflected.square(self._counts[1][step])) / float(np.exp(2.0 * vector[at + 1]))
             seen.setdefault(int(self.band[step]), []).append(max(little, 0.0) / whole)
         return {band: float(np.sqrt(np.mean(ratios))) for band, ratios in seen.items()}
 
-    def _forward_steps(
-        self, vectors: Array, at: npt.NDArray[np.intp], gamma: Complex, forward: Law, reflected: Law
-    ) -> tuple[Array, Array]:
+    def _forward_steps(self, vectors: Array, at: Places, gamma: Complex) -> tuple[Array, Array]:
         """Residuals of steps in which the forward detector supplies the power: wattmeter's and reflected count's."""
         d = self.leaks(vectors, self.band[at])[0]
-        gains = self._band_at(self.band[at])
-        incident, noise = self._incident(vectors, at, gamma, forward)
-        expected = incident * np.exp(2.0 * vectors[..., gains + 1]) * np.abs(gamma + d) ** 2
+        incident, noise = self._incident(vectors, at, gamma)
+        square, slope = self._squares(vectors, 1, at)
+        expected = incident * np.exp(2.0 * vectors[..., self._band_at(self.band[at]) + 1]) * np.abs(gamma + d) ** 2
         # Compared as powers, in which the reflected law is asked one way only. The forward count's own noise moves
         # the power it supplies, and so what is expected here.
-        sd = np.hypot(reflected.slope(self._reflected[at]) * self._count_sd(1, at), noise * expected)
-        reflections = (reflected.square(self._reflected[at]) - expected) / sd
-        known = reflected.covers(self._reflected[at]) & forward.covers(self._forward[at])
-        return self._wattmeter(at, incident, noise), np.where(known, reflections, 0.0)
+        sd = np.hypot(slope * self._count_sd(1, at), noise * expected)
+        known = np.logical_and(
+            *(law.covers(counts[at]) for law, counts in zip(self.first_laws, self._counts, strict=True))
+        )
+        return self._wattmeter(at, incident, noise), np.where(known, (square - expected) / sd, 0.0)
 
-    def _incident(self, vectors: Array, at: npt.NDArray[np.intp], gamma: Complex, forward: Law) -> tuple[Array, Array]:
+    def _incident(self, vectors: Array, at: Places, gamma: Complex) -> tuple[Array, Array]:
         """Power [W] of steps as the forward detector saw it, and its relative sd by counting."""
         c = self.leaks(vectors, self.band[at])[1]
-        square = np.maximum(forward.square(self._forward[at]), 1e-12)
+        square, slope = self._squares(vectors, 0, at)
+        square = np.maximum(square, 1e-12)
         gain = np.exp(2.0 * vectors[..., self._band_at(self.band[at])])
-        noise = forward.slope(self._forward[at]) * self._count_sd(0, at) / square
-        return square / gain / np.abs(1.0 + c * gamma) ** 2, noise
+        return square / gain / np.abs(1.0 + c * gamma) ** 2, slope * self._count_sd(0, at) / square
 
-    def _through(self, vectors: Array, reflected: Law) -> tuple[Array, Array]:
+    def _through(self, vectors: Array) -> tuple[Array, Array]:
         """Power [W] at the wattmeter of reversed steps as the reflected detector saw it, and its relative sd."""
         at = self.of_kind["reversed"]
         gains = self._band_at(self.band[at])
-        square = np.maximum(reflected.square(self._reflected[at]), 1e-12)
-        noise = reflected.slope(self._reflected[at]) * self._count_sd(1, at) / square
+        square, slope = self._squares(vectors, 1, at)
+        square = np.maximum(square, 1e-12)
         lost = 10.0 ** (-vectors[..., gains + 8] / 10.0)
-        return square / np.exp(2.0 * vectors[..., gains + 1]) * lost, noise
+        return square / np.exp(2.0 * vectors[..., gains + 1]) * lost, slope * self._count_sd(1, at) / square
 
-    def _reversed_steps(self, vectors: Array, reflected: Law) -> Array:
-        return self._wattmeter(self.of_kind["reversed"], *self._through(vectors, reflected))
+    def _squares(self, vectors: Array, side: int, at: Places) -> tuple[Array, Array]:
+        """A law's square and slope at the counts of steps; each set of law parameters is worked out once only.
 
-    def _dark_steps(self, forward: Law, reflected: Law) -> tuple[Array, Array]:
+        Of the hundred vectors of a Jacobian a handful differ in the law, which is the costly part.
+        """
+        counts, first = self._counts[side][at], self.first_laws[side]
+        own = vectors[..., self.law_slice(side)]
+        if own.ndim == 1:
+            law = first.with_parameters(own)
+            return law.square(counts), law.slope(counts)
+        rows, place = np.unique(own, axis=0, return_inverse=True)
+        law = first.with_parameters(rows)
+        return law.square(counts)[place.reshape(-1)], law.slope(counts)[place.reshape(-1)]
+
+    def _dark_steps(self, vectors: Array) -> list[Array]:
         at = self.of_kind["dark"]
-        return (
-            (self._forward[at] - forward.offset) / self._sds[0][at],
-            (self._reflected[at] - reflected.offset) / self._sds[1][at],
-        )
+        offsets = (vectors[..., self.law_slice(side)][..., :1] for side in (0, 1))
+        return [(self._counts[side][at] - offset) / self._sds[side][at] for side, offset in enumerate(offsets)]
 
-    def _wattmeter(self, at: npt.NDArray[np.intp], seen_w: Array, noise: Array) -> Array:
+    def _wattmeter(self, at: Places, seen_w: Array, noise: Array) -> Array:
         return np.asarray(np.log(seen_w / self._power[at]) / np.hypot(self.scatter, noise))
 
-    def _count_sd(self, channel: int, at: npt.NDArray[np.intp]) -> Array:
-        counts = (self._forward, self._reflected)[channel][at]
-        return np.asarray(np.hypot(self._sds[channel][at], COUNT_PART * counts))
+    def _count_sd(self, side: int, at: Places) -> Array:
+        return np.asarray(np.hypot(self._sds[side][at], COUNT_PART * self._counts[side][at]))
 
     def _first_laws(self, kind: type[Law]) -> tuple[Law, Law]:
-        dark = self.of_kind["dark"]
+        darks = [float(np.mean(counts[self.of_kind["dark"]])) for counts in self._counts]
         found = []
-        for step_kind, counts in (("power", self._forward), ("reversed", self._reflected)):
+        for side, step_kind in enumerate(("power", "reversed")):
             at = self.of_kind[step_kind]
-            found.append(kind.start(counts[at], self._power[at], self.band[at], float(np.mean(counts[dark]))))
+            found.append(kind.start(self._counts[side][at], self._power[at], self.band[at], darks[side]))
         forward, reflected = found
         if forward is None:
             raise SheetError(
@@ -250,14 +257,14 @@ class BenchModel:
                 "the reversed steps do not carry a table law: wanted at least 4, as widely spread in power as the "
                 "power steps; the reflected detector's table cannot be had from the forward one's"
             )
-        alike = np.concatenate([[np.mean(self._reflected[dark])], forward.parameters[1:]])
+        alike = np.concatenate([[darks[1]], forward.parameters[1:]])
         return forward, forward.with_parameters(alike) if reflected is None else reflected
 
     def _band_of(self, step: BenchStep) -> int:
         hz = step.frequency_hz
         return -1 if hz is None else int(np.argmin([abs(np.log(hz / centre)) for centre in self.bands]))
 
-    def _band_at(self, bands: npt.NDArray[np.intp]) -> npt.NDArray[np.intp]:
+    def _band_at(self, bands: Places) -> Places:
         return np.asarray(self._bands_at + BAND_SIZE * bands)
 
     @property
