@@ -138,19 +138,14 @@ def _solve(model: BenchModel) -> tuple[Array, Array]:
     """Best vector over all starts, and its covariance; the laws of `model` are refined on the way."""
     best = min((_descend(model, start) for start in start_vectors(model)), key=lambda found: found[1])[0]
     for _ in range(4):
-        before, open_db = model.scatter, model.refine_laws(best)
+        before = model.scatter
+        model.refine_laws(best)
         model.scatter = _scatter(model, best)
         best = _descend(model, best)[0]
         if abs(model.scatter - before) < 0.02 * before:
             break
     jacobian = _jacobian(model.residuals)(best)
-    covariance = np.asarray(np.linalg.inv(jacobian.T @ jacobian), dtype=float)
-    # What a law does not follow moves its powers like a gain, each side for itself.
-    for band in range(len(model.bands)):
-        for side, db in enumerate(open_db):
-            place = model.band_slice(band).start + side
-            covariance[place, place] += (db * np.log(10.0) / 20.0) ** 2
-    return best, covariance
+    return best, np.asarray(np.linalg.inv(jacobian.T @ jacobian), dtype=float)
 
 
 def _descend(model: BenchModel, start: Array) -> tuple[Array, float]:

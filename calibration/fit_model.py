@@ -116,19 +116,17 @@ class BenchModel:
             reflected.with_parameters(vectors[..., self.law_slice(1)]),
         )
 
-    def refine_laws(self, vector: Array) -> tuple[float, float]:
-        """Let the laws follow what the fit left over at known powers; returns what is still open [dB, sd] of each."""
-        laws, left = list(self.laws(vector)), []
+    def refine_laws(self, vector: Array) -> None:
+        """Let the laws follow what the fit left over at known powers."""
+        laws = list(self.laws(vector))
         _, _, dummy = self.leaks(vector, self.band[self.of_kind["power"]])
         incident, _ = self._incident(vector, self.of_kind["power"], dummy)
         through, _ = self._through(vector)
         for side, (kind, seen_w) in enumerate((("power", incident), ("reversed", through))):
             at = self.of_kind[kind]
             off_db = _DB * np.log(self._power[at] / seen_w)
-            laws[side], open_db = laws[side].refined(self._counts[side][at], off_db, _DB * self.scatter)
-            left.append(open_db)
+            laws[side] = laws[side].refined(self._counts[side][at], off_db, _DB * self.scatter)
         self.first_laws = (laws[0], laws[1])
-        return left[0], left[1]
 
     def leaks(self, vectors: Array, bands: Places) -> tuple[Complex, Complex, Complex]:
         """Complex d, c and dummy reflection in each of `bands`, shape (..., len(bands))."""
@@ -193,7 +191,8 @@ class BenchModel:
         expected = incident * np.exp(2.0 * vectors[..., self._band_at(self.band[at]) + 1]) * np.abs(gamma + d) ** 2
         # Compared as powers, in which the reflected law is asked one way only. The forward count's own noise moves
         # the power it supplies, and so what is expected here.
-        sd = np.hypot(slope * self._count_sd(1, at), noise * expected)
+        own = np.hypot(slope * self._count_sd(1, at), self._misfit(1, at) * expected)
+        sd = np.hypot(own, noise * expected)
         known = np.logical_and(
             *(law.covers(counts[at]) for law, counts in zip(self.first_laws, self._counts, strict=True))
         )
@@ -205,7 +204,8 @@ class BenchModel:
         square, slope = self._squares(vectors, 0, at)
         square = np.maximum(square, 1e-12)
         gain = np.exp(2.0 * vectors[..., self._band_at(self.band[at])])
-        return square / gain / np.abs(1.0 + c * gamma) ** 2, slope * self._count_sd(0, at) / square
+        noise = np.hypot(slope * self._count_sd(0, at) / square, self._misfit(0, at))
+        return square / gain / np.abs(1.0 + c * gamma) ** 2, noise
 
     def _through(self, vectors: Array) -> tuple[Array, Array]:
         """Power [W] at the wattmeter of reversed steps as the reflected detector saw it, and its relative sd."""
@@ -214,7 +214,8 @@ class BenchModel:
         square, slope = self._squares(vectors, 1, at)
         square = np.maximum(square, 1e-12)
         lost = 10.0 ** (-vectors[..., gains + 8] / 10.0)
-        return square / np.exp(2.0 * vectors[..., gains + 1]) * lost, slope * self._count_sd(1, at) / square
+        noise = np.hypot(slope * self._count_sd(1, at) / square, self._misfit(1, at))
+        return square / np.exp(2.0 * vectors[..., gains + 1]) * lost, noise
 
     def _squares(self, vectors: Array, side: int, at: Places) -> tuple[Array, Array]:
         """A law's square and slope at the counts of steps; each set of law parameters is worked out once only.
@@ -240,6 +241,9 @@ class BenchModel:
 
     def _count_sd(self, side: int, at: Places) -> Array:
         return np.asarray(np.hypot(self._sds[side][at], COUNT_PART * self._counts[side][at]))
+
+    def _misfit(self, side: int, at: Places) -> Array:
+        return self.first_laws[side].misfit(self._counts[side][at])
 
     def _first_laws(self, kind: type[Law]) -> tuple[Law, Law]:
         darks = [float(np.mean(counts[self.of_kind["dark"]])) for counts in self._counts]

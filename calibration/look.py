@@ -176,7 +176,10 @@ class Look:
             by_ratio[..., self._reflected_places] = by_reflected / forward_w[..., None]
         own = covariance[..., self._forward_places, :][..., self._forward_places]
         reference = np.abs(forward_w) * self._bridge.reference_pct / 100.0
-        return np.hypot(NORMAL_DEVIATE * _sd(by_forward, own), reference), NORMAL_DEVIATE * _sd(by_ratio, covariance)
+        strays = [law.misfit(counts) for law, counts in zip(self._laws, (nf, nr), strict=True)]
+        forward_sd = np.hypot(_sd(by_forward, own), strays[0] * forward_w)
+        ratio_sd = np.hypot(_sd(by_ratio, covariance), np.hypot(*strays) * ratio)
+        return np.hypot(NORMAL_DEVIATE * forward_sd, reference), NORMAL_DEVIATE * ratio_sd
 
 
 @dataclass(frozen=True, slots=True)

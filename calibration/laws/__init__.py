@@ -59,8 +59,11 @@ class Law(Protocol):
     def covers(self, counts: npt.ArrayLike) -> npt.NDArray[np.bool_]:
         """Where the law may be used, any shape; near dark and beyond its span it may not be known."""
 
-    def refined(self, counts: Array, off_db: Array, scatter_db: float) -> tuple[Self, float]:
-        """A law that also follows what a fit left over, and the sd [dB] that is still not followed.
+    def misfit(self, counts: npt.ArrayLike) -> Array:
+        """Relative sd of power by which a real detector may stray from the law at `counts`, any shape."""
+
+    def refined(self, counts: Array, off_db: Array, scatter_db: float) -> Self:
+        """A law that also follows what a fit left over.
 
         off_db: reference less law at each of `counts` [m], decibels of power; scatter_db: the reference's own scatter.
         """

@@ -91,9 +91,13 @@ class DiodeLaw:
         """The law holds from foot to head."""
         return np.ones(np.shape(counts), dtype=bool)
 
-    def refined(self, counts: Array, off_db: Array, scatter_db: float) -> tuple[DiodeLaw, float]:
-        """The law is physics: what it leaves over is not learnt from one bench."""
-        return self, 0.0
+    def misfit(self, counts: npt.ArrayLike) -> Array:
+        """None: the law is physics."""
+        return np.zeros(np.shape(counts))
+
+    def refined(self, counts: Array, off_db: Array, scatter_db: float) -> DiodeLaw:
+        """The same: what physics leaves over is not learnt from one bench."""
+        return self
 
     def table(self) -> dict[str, Any]:
         """Plain numbers."""

@@ -25,17 +25,22 @@ _ENOUGH = 6
 _LINE_SD_DB = 0.3
 _CORRECTED_SD_DB = 0.03
 _NOTHING = np.zeros(0)
+_LISTS = ("knots", "corrections", "correction_slopes")
 
 
 @dataclass(frozen=True, slots=True)
 class LogLaw:
-    """Logarithmic detector: dark count, slope [counts/dB], correction [dB] through knots [counts]."""
+    """Logarithmic detector: dark count, slope [counts/dB], correction [dB] through knots [counts].
+
+    open_db: sd [dB] of what the correction does not follow.
+    """
 
     offset: float
     slope_per_db: float
     knots: Array = field(default_factory=lambda: _NOTHING)
     corrections: Array = field(default_factory=lambda: _NOTHING)
     correction_slopes: Array = field(default_factory=lambda: _NOTHING)
+    open_db: float = _LINE_SD_DB
 
     @property
     def parameters(self) -> Array:
@@ -99,10 +104,18 @@ class LogLaw:
         """The line goes on everywhere."""
         return np.ones(np.shape(counts), dtype=bool)
 
-    def refined(self, counts: Array, off_db: Array, scatter_db: float) -> tuple[LogLaw, float]:
+    def misfit(self, counts: npt.ArrayLike) -> Array:
+        """A data sheet's conformance where the line stands alone, what the correction leaves where it helps."""
+        n = np.asarray(counts, dtype=float)
+        if not len(self.knots):
+            return np.full(n.shape, _LINE_SD_DB / _DB)
+        corrected = (n >= self.knots[0]) & (n <= self.knots[-1])
+        return np.asarray(np.where(corrected, self.open_db, _LINE_SD_DB) / _DB)
+
+    def refined(self, counts: Array, off_db: Array, scatter_db: float) -> LogLaw:
         """With enough powers a smooth correction through what the line left over."""
         if len(np.unique(counts)) < _ENOUGH:
-            return self, _LINE_SD_DB
+            return self
         from scipy.interpolate import make_smoothing_spline
 
         places = np.argsort(counts)
@@ -110,23 +123,26 @@ class LogLaw:
         # The smoothing is the usual trade of roughness against fit; scatter of the reference says how much to smooth.
         penalty = (scatter_db / max(float(np.std(y)), 1e-9)) ** 2 * (np.ptp(x) / len(x)) ** 3
         spline = make_smoothing_spline(x, y, lam=penalty)
-        values, slopes = spline(x), spline.derivative()(x)
-        before = self._correction(x)[0] if len(self.knots) else 0.0
-        before_slope = self._correction(x)[1] if len(self.knots) else 0.0
-        law = replace(self, knots=x, corrections=before - values, correction_slopes=before_slope - slopes)
-        return law, float(np.hypot(_CORRECTED_SD_DB, scatter_db / np.sqrt(2.0)))
+        before, before_slope = self._correction(x)
+        return replace(
+            self,
+            knots=x,
+            corrections=before - spline(x),
+            correction_slopes=before_slope - spline.derivative()(x),
+            open_db=float(np.hypot(_CORRECTED_SD_DB, scatter_db / np.sqrt(2.0))),
+        )
 
     def table(self) -> dict[str, Any]:
         """Plain numbers."""
-        lists = {"knots": self.knots, "corrections": self.corrections, "correction_slopes": self.correction_slopes}
-        plain = {"offset": float(self.offset), "slope_per_db": float(self.slope_per_db)}
-        return plain | {name: [float(value) for value in values] for name, values in lists.items()}
+        plain = {name: float(getattr(self, name)) for name in ("offset", "slope_per_db", "open_db")}
+        return plain | {name: [float(value) for value in getattr(self, name)] for name in _LISTS}
 
     @classmethod
     def from_table(cls, table: dict[str, Any]) -> LogLaw:
         """The law of `table`."""
-        lists = (np.array([float(v) for v in table[n]]) for n in ("knots", "corrections", "correction_slopes"))
-        return cls(float(table["offset"]), float(table["slope_per_db"]), *lists)
+        knots, values, slopes = (np.array([float(v) for v in table[name]]) for name in _LISTS)
+        offset, slope_per_db, open_db = (float(table[name]) for name in ("offset", "slope_per_db", "open_db"))
+        return cls(offset, slope_per_db, knots, values, slopes, open_db)
 
     @classmethod
     def start(cls, counts: Array, watts: Array, group: npt.NDArray[np.intp], dark: float) -> LogLaw | None:
