@@ -18,7 +18,7 @@ from .law_table import LawTable
 from .laws import Law
 from .readings import Terms
 
-__all__ = ["BandTerms", "Look", "Taken", "counting_sd"]
+__all__ = ["BandTerms", "Look", "Taken", "below_span", "counting_sd"]
 
 Array = npt.NDArray[np.float64]
 Places = npt.NDArray[np.intp]
@@ -28,9 +28,9 @@ Bits = npt.NDArray[np.uint32]
 #: Bits of a counts frame's flags on the wire.
 _WIRE_FORWARD_CLIPPED, _WIRE_REFLECTED_CLIPPED = 1, 2
 #: Forward within this many sd of dark is no carrier; reflected within that many is below reading.
-_NO_CARRIER_SD, _BELOW_READING_SD = 4.0, 3.0
+NO_CARRIER_SD, BELOW_READING_SD = 4.0, 3.0
 #: At 99 % of full scale a detector is taken as clipped, whatever the frame says.
-_CLIPPED_PART = 0.99
+CLIPPED_PART = 0.99
 
 
 @dataclass(frozen=True, slots=True)
@@ -121,12 +121,11 @@ class Look:
     def _edges(
         self, nf: Array, nr: Array, known: Bools, sds: tuple[Array, Array], wire: npt.NDArray[np.int_]
     ) -> _Edges:
-        ceiling = _CLIPPED_PART * self._bridge.full_scale
+        ceiling = CLIPPED_PART * self._bridge.full_scale
         forward, reflected = self._laws
-        silent = known & (nf - forward.offset < _NO_CARRIER_SD * sds[0][0])
-        near_dark = nr - reflected.offset < _BELOW_READING_SD * sds[1][0]
-        # Below the span of a table law reflected is bounded by the span's lower end; elsewhere outside nothing is said.
-        under = ~reflected.covers(nr) & reflected.covers(np.maximum(nr, _lowest(reflected)))
+        silent = known & (nf - forward.offset < NO_CARRIER_SD * sds[0][0])
+        near_dark = nr - reflected.offset < BELOW_READING_SD * sds[1][0]
+        under = below_span(reflected, nr)
         known = known & (silent | (forward.covers(nf) & (reflected.covers(nr) | under)))
         forward_clipped = known & ((wire & _WIRE_FORWARD_CLIPPED != 0) | (nf >= ceiling))
         reflected_clipped = known & ((wire & _WIRE_REFLECTED_CLIPPED != 0) | (nr >= ceiling))
@@ -225,9 +224,9 @@ def _beyond_open(terms: Terms) -> Bools:
         return np.asarray((least > largest).all(axis=0))
 
 
-def _lowest(law: Law) -> float:
-    """The lowest count [counts] at which a law may be used: a table's first knot, else its dark count."""
-    return float(getattr(law, "knots", [law.offset])[0]) if not law.covers(law.offset) else law.offset
+def below_span(law: Law, counts: Array) -> Bools:
+    """Where counts lie below the span of a table law: reflected is then bounded by the span's lower end."""
+    return ~law.covers(counts) & law.covers(np.maximum(counts, law.lowest))
 
 
 def _sd(derivative: Array, covariance: Array) -> Array:

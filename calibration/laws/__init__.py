@@ -59,6 +59,10 @@ class Law(Protocol):
     def covers(self, counts: npt.ArrayLike) -> npt.NDArray[np.bool_]:
         """Where the law may be used, any shape; near dark and beyond its span it may not be known."""
 
+    @property
+    def lowest(self) -> float:
+        """The lowest count at which the law may be used: the dark count, or where a table begins."""
+
     def misfit(self, counts: npt.ArrayLike) -> Array:
         """Relative sd of power by which a real detector may stray from the law at `counts`, any shape."""
 

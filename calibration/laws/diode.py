@@ -91,6 +91,11 @@ class DiodeLaw:
         """The law holds from foot to head."""
         return np.ones(np.shape(counts), dtype=bool)
 
+    @property
+    def lowest(self) -> float:
+        """The lowest count at which it may be used."""
+        return self.offset
+
     def misfit(self, counts: npt.ArrayLike) -> Array:
         """None: the law is physics."""
         return np.zeros(np.shape(counts))

@@ -104,6 +104,11 @@ class LogLaw:
         """The line goes on everywhere."""
         return np.ones(np.shape(counts), dtype=bool)
 
+    @property
+    def lowest(self) -> float:
+        """The lowest count at which it may be used."""
+        return self.offset
+
     def misfit(self, counts: npt.ArrayLike) -> Array:
         """A data sheet's conformance where the line stands alone, what the correction leaves where it helps."""
         n = np.asarray(counts, dtype=float)

@@ -92,6 +92,11 @@ class TableLaw:
         n = np.asarray(counts, dtype=float)
         return np.asarray((n >= self.knots[0]) & (n <= self.knots[-1]))
 
+    @property
+    def lowest(self) -> float:
+        """The lowest count at which it may be used."""
+        return float(self.knots[0])
+
     def misfit(self, counts: npt.ArrayLike) -> Array:
         """Between knots it is trusted to half a percent."""
         return np.full(np.shape(counts), _BETWEEN_KNOTS)
