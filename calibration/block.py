@@ -60,6 +60,8 @@ class BlockReader:
         self._reflected_place = places[1].astype(np.float32)
         self._forward_w = np.where(edges.silent, 0.0, forward_w).astype(np.float32)
         self._forward_bits, self._reflected_bits = edges.forward_bits, edges.reflected_bits
+        # Without a carrier nothing is said of the reflected power.
+        self._kept_bits = np.where(edges.silent, ~np.uint32(flag.bit("below-reading")), ~np.uint32(0))
         self._forward_shown = np.where(edges.silent | np.isnan(forward_w), np.nan, 1.0).astype(np.float32)
         self._reflected_shown = np.where(edges.hidden | np.isnan(reflected_w), np.nan, 1.0).astype(np.float32)
         rho = rho_estimate(np.exp(np.linspace(_LOWEST, _HIGHEST, _STEPS)), band.directivity, band.forward_leak)
@@ -94,7 +96,9 @@ class BlockReader:
         np.subtract(out["forward_w"], out["reflected_w"], out=out["net_w"])
         np.multiply(self._rho.take(at), shown, out=out["rho"])
         np.multiply(self._swr.take(at), shown, out=out["swr"])
-        np.bitwise_or(self._forward_bits.take(nf), self._reflected_bits.take(nr), out=bits)
+        self._reflected_bits.take(nr, out=bits)
+        bits &= self._kept_bits.take(nf)
+        bits |= self._forward_bits.take(nf)
 
     @staticmethod
     def _clip(columns: dict[str, Array], bits: npt.NDArray[np.uint32], wire_flags: npt.NDArray[np.uint8]) -> None:
