@@ -6,14 +6,16 @@ pydantic model leaves this module: what comes out are the frozen dataclasses of 
 
 from __future__ import annotations
 
-import difflib
+import math
+import re
+import shlex
 import tomllib
-from collections.abc import Callable
+from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from pydantic import AfterValidator, BaseModel, ConfigDict, Field, ValidationError, model_validator
+from pydantic import AfterValidator, BaseModel, ConfigDict, Field, ValidationError
 
 from calibration.bench import BenchRatings, BenchStep
 from calibration.bridge import Bridge
@@ -21,6 +23,7 @@ from calibration.errors import UnitError
 from calibration.loads import load_impedance_ohm
 
 from .errors import FileError
+from .faults import fault_in_words, short
 from .fit_table import FitTable
 
 __all__ = ["SCHEMA", "BridgeFile", "load_bridge_file", "parse_bridge_file", "sheet_text"]
@@ -28,6 +31,8 @@ __all__ = ["SCHEMA", "BridgeFile", "load_bridge_file", "parse_bridge_file", "she
 SCHEMA = 1
 #: A bench sheet of thousands of steps is still far below this [bytes].
 _MOST_BYTES = 16_000_000
+#: Faults told at once; with more of them it is another kind of file.
+_MOST_FAULTS = 50
 
 
 @dataclass(frozen=True, slots=True)
@@ -45,14 +50,16 @@ class BridgeFile:
     device_id: int | None = None
     match_return_loss_db: float | None = None
     max_w: float | None = None
+    reference_mv: int | None = None
     fit_id: int | None = None
 
     def calibrated(self) -> Bridge:
         """The fitted bridge. FileError for a sheet without [fit]."""
         if self.bridge is None:
+            path = shlex.quote(self.source)
             raise FileError(
                 f"{self.source}: is a bench sheet without [fit]; wanted a calibrated bridge file: "
-                f"run `bridgewright fit {self.source} -o {self.source}` first"
+                f"run `bridgewright fit {path} -o {path}` first"
             )
         return self.bridge
 
@@ -64,70 +71,109 @@ def load_bridge_file(path: str | Path) -> BridgeFile:
 
 def sheet_text(path: str | Path) -> str:
     """The text of a bridge file, unparsed. FileError where it cannot be read or is no text."""
-    name = str(path)
     try:
-        if Path(path).stat().st_size > _MOST_BYTES:
-            raise FileError(
-                f"{name}: is {Path(path).stat().st_size} bytes; wanted a TOML bridge file of a few kilobytes"
-            )
-        return Path(path).read_bytes().decode("utf-8")
+        with open(path, "rb") as file:
+            # A byte beyond the limit tells enough: what is named may be a device or a pipe without end.
+            data = file.read(_MOST_BYTES + 1)
+    except OSError as error:
+        raise FileError(f"{path}: cannot be read: {error.strerror}; wanted a TOML bridge file") from error
+    if len(data) > _MOST_BYTES:
+        raise FileError(f"{path}: is larger than {_MOST_BYTES} bytes; wanted a TOML bridge file of some kilobytes")
+    try:
+        return data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
         raise FileError(
-            f"{name}: byte {error.start} is not UTF-8 text; wanted a TOML bridge file; is this another kind of file?"
+            f"{path}: byte {error.start} is not UTF-8 text; wanted a TOML bridge file; is this another kind of file?"
         ) from error
-    except OSError as error:
-        raise FileError(f"{name}: cannot be read: {error.strerror}; wanted a TOML bridge file") from error
 
 
-def parse_bridge_file(text: str, source: str) -> BridgeFile:
-    """Validate the text of a bridge file; `source` names it in faults. FileError with every fault in words."""
+def parse_bridge_file(text: str, source: str, *, steps_only: bool = False) -> BridgeFile:
+    """Validate the text of a bridge file; `source` names it in faults. FileError with every fault in words.
+
+    steps_only: pass over a [fit], which is about to be made anew and may be wrong.
+    """
+    raw = _table_of(text, source)
+    if steps_only:
+        raw.pop("fit", None)
+    faults, model = _validated(raw)
+    table = None
+    if isinstance(raw.get("fit"), dict):
+        try:
+            table = FitTable.read(raw["fit"], source)
+        except FileError as error:
+            faults.append(str(error).removeprefix(f"{source}: "))
+    if faults or model is None:
+        more = len(faults) - _MOST_FAULTS
+        told = faults[:_MOST_FAULTS] + ([f"and {more} more faults"] if more > 0 else [])
+        raise FileError(*(f"{source}: {fault}" for fault in told))
+    return model.to_bridge_file(source, table)
+
+
+def _table_of(text: str, source: str) -> dict[str, Any]:
+    """TOML that claims to be a bridge file of a schema we read."""
     try:
         raw = tomllib.loads(text)
-    except (tomllib.TOMLDecodeError, RecursionError) as error:
+    except (ValueError, RecursionError) as error:
+        # Besides TOML's own: a number of thousands of digits, tables nested by the thousand.
+        why = error if isinstance(error, tomllib.TOMLDecodeError) else "it has a number or a nesting without end"
+        raise FileError(f"{source}: is not TOML: {why}; wanted a bridge file, which starts with schema = 1") from error
+    if not raw.keys() & {"schema", "bridge"}:
         raise FileError(
-            f"{source}: is not TOML: {error}; wanted a bridge file, which starts with schema = 1"
-        ) from error
-    _check_schema(raw, source)
-    try:
-        model = _FileModel.model_validate(raw)
-    except ValidationError as error:
-        faults = [_fault(one) for one in error.errors(include_url=False)]
-        raise FileError("\n".join(f"{source}: {fault}" for fault in faults)) from error
-    return model.to_bridge_file(source)
-
-
-def _check_schema(raw: dict[str, Any], source: str) -> None:
-    found = raw.get("schema")
-    if isinstance(found, int) and not isinstance(found, bool) and found > SCHEMA:
-        raise FileError(
-            f"{source}: schema: found {found}; this program reads {SCHEMA}: a newer one wrote it; update to read it"
+            f"{source}: has neither schema nor [bridge]; wanted a bridge file, which starts with schema = 1"
         )
+    found = raw.get("schema")
+    if isinstance(found, int) and found > SCHEMA:
+        raise FileError(
+            f"{source}: schema: found {short(found)}; this program reads {SCHEMA}: "
+            "a newer one wrote it; update to read it"
+        )
+    return raw
+
+
+def _validated(raw: dict[str, Any]) -> tuple[list[str], _FileModel | None]:
+    """All faults of the table in words, and the model where pydantic finds none."""
+    of_steps = list(_step_faults(raw))
+    try:
+        return of_steps, _FileModel.model_validate(raw)
+    except ValidationError as error:
+        return [fault_in_words(one, _KNOWN) for one in error.errors(include_url=False)] + of_steps, None
 
 
 def _frequency(value: float) -> float:
-    if value < 1e5:
-        scale = 1e6 if value < 1e3 else 1e3
-        raise ValueError(
-            f"wanted hertz, from 100000 up; did you mean {value * scale:.0f} ({value:g} {_PREFIX[scale]})?"
-        )
-    return value
+    low, high = _FREQUENCIES_HZ
+    if low <= value <= high:
+        return value
+    unit, scale = ("MHz", 1e6) if value < 1e3 else ("kHz", 1e3)
+    meant = value * scale
+    hint = f"; did you mean {meant:.0f} ({value:g} {unit})?" if low <= meant <= high else ""
+    raise ValueError(f"found {value:g}; wanted hertz, from {low:.0f} to {high:.0f}{hint}")
 
 
 def _load(value: str) -> str:
     try:
-        load_impedance_ohm(value)
-    except UnitError as error:
-        raise ValueError(f"wanted ohms like 100 or 24.87, R+Xj like 25+3.5j, open or short ({error})") from error
+        ohm = load_impedance_ohm(value)
+    except UnitError:
+        ohm = complex("nan")
+    if not math.isfinite(abs(ohm)) and value.strip().lower() != "open":
+        raise ValueError(f"found {short(value)}; wanted ohms like 100 or 24.87, R+Xj like 25+3.5j, open or short")
     return value
 
 
-_PREFIX = {1e6: "MHz", 1e3: "kHz"}
+def _device_id(value: str) -> str:
+    if not re.fullmatch("[0-9A-Fa-f]{1,8}", value) or int(value, 16) == 0:
+        raise ValueError(
+            f"found {short(value)}; wanted 1 to 8 hexadecimal digits, not all 0, as the board's nameplate has them"
+        )
+    return value
+
+
+_FREQUENCIES_HZ = (1e5, 1e10)
 _Positive = Annotated[float, Field(gt=0.0)]
 _NotNegative = Annotated[float, Field(ge=0.0)]
 _Percent = Annotated[float, Field(ge=0.0, le=100.0)]
 _ReturnLoss = Annotated[float, Field(ge=3.0, le=80.0)]
-_Frequency = Annotated[float, Field(le=1e10), AfterValidator(_frequency)]
-_HexId = Annotated[str, Field(pattern=r"^[0-9A-Fa-f]{1,8}$")]
+_Frequency = Annotated[float, AfterValidator(_frequency)]
+_DeviceId = Annotated[str, AfterValidator(_device_id)]
 
 
 class _Model(BaseModel):
@@ -138,7 +184,7 @@ class _BridgeModel(_Model):
     name: Annotated[str, Field(min_length=1, max_length=200)]
     full_scale: Annotated[int, Field(ge=255, le=2**32 - 1)]
     z0_ohm: Annotated[float, Field(ge=10.0, le=1000.0)] = 50.0
-    detector: Literal["diode"]
+    detector: Literal["diode", "log", "table"]
     diode: Literal["schottky", "germanium", "silicon"] | None = None
     eg_ev: _Positive | None = None
     xti: _Positive | None = None
@@ -146,7 +192,7 @@ class _BridgeModel(_Model):
     max_w: _Positive | None = None
     hold_ms: _NotNegative | None = None
     reference_mv: Annotated[int, Field(ge=100, le=65535)] | None = None
-    device_id: _HexId | None = None
+    device_id: _DeviceId | None = None
     match_return_loss_db: _ReturnLoss | None = None
 
 
@@ -180,25 +226,8 @@ class _StepModel(_Model):
     forward_sd: _NotNegative = 1.0
     reflected: Annotated[float, Field(ge=0.0, le=2**32)]
     reflected_sd: _NotNegative = 1.0
-    samples: Annotated[int, Field(ge=1)] = 1
+    samples: Annotated[int, Field(ge=1, le=10**9)] = 1
     temperature_c: Annotated[float, Field(ge=-60.0, le=150.0)] = 25.0
-
-    @model_validator(mode="after")
-    def _complete(self) -> _StepModel:
-        missing = []
-        if self.kind != "dark" and self.frequency_hz is None:
-            missing.append("frequency_hz (hertz)")
-        if self.kind in ("power", "reversed") and self.power_w is None and self.volts is None:
-            missing.append("power_w (watts, the wattmeter's reading) or volts across the dummy load")
-        if self.volts is not None and self.volts_kind is None:
-            missing.append('volts_kind ("rms" or "peak")')
-        if self.kind == "load" and self.load is None:
-            missing.append('load (ohms like "100", "open" or "short")')
-        if missing:
-            raise ValueError(f"a {self.kind} step also needs {' and '.join(missing)}")
-        if self.power_w is not None and self.volts is not None:
-            raise ValueError("has power_w and volts; wanted one of them")
-        return self
 
 
 class _FileModel(_Model):
@@ -208,14 +237,13 @@ class _FileModel(_Model):
     step: list[_StepModel] = []
     fit: dict[str, Any] | None = None
 
-    def to_bridge_file(self, source: str) -> BridgeFile:
+    def to_bridge_file(self, source: str, table: FitTable | None) -> BridgeFile:
         """The dataclasses that floor 0 and the rest of the program know."""
         head, bench = self.bridge, self.bench
         ratings = BenchRatings(
             bench.reference_pct, bench.reference_full_scale_w, bench.dummy_return_loss_db, bench.resistor_pct
         )
         device_id = None if head.device_id is None else int(head.device_id, 16)
-        table = None if self.fit is None else FitTable.read(self.fit, source)
         return BridgeFile(
             source=source,
             name=head.name,
@@ -228,91 +256,63 @@ class _FileModel(_Model):
             device_id=device_id,
             match_return_loss_db=head.match_return_loss_db,
             max_w=head.max_w,
+            reference_mv=head.reference_mv,
             fit_id=table.id if table else None,
         )
 
 
-#: What a key wants, in a reader's words, where the type alone does not say it.
-_UNITS = {
-    "full_scale": "the largest count a tally can hold",
-    "z0_ohm": "ohms",
-    "power_w": "watts",
-    "max_w": "watts",
-    "frequency_hz": "hertz",
-    "forward": "mean counts",
-    "reflected": "mean counts",
-    "reference_pct": "percent",
-    "resistor_pct": "percent",
-    "dummy_return_loss_db": "decibels",
-    "match_return_loss_db": "decibels",
-    "temperature_c": "degrees Celsius",
-    "line_deg": "degrees",
-    "load": 'text like "100"',
-    "samples": "a whole number",
+def _step_faults(raw: dict[str, Any]) -> Iterator[str]:
+    """What contradicts within a step; told from the raw table, so that other faults hide none of it."""
+    head, steps = raw.get("bridge"), raw.get("step")
+    most = head.get("full_scale") if isinstance(head, dict) else None
+    for number, step in enumerate(steps if isinstance(steps, list) else [], 1):
+        if isinstance(step, dict):
+            yield from (f"step[{number}]{fault}" for fault in [*_kind_faults(step), *_count_faults(step, most)])
+
+
+def _kind_faults(step: dict[str, Any]) -> Iterator[str]:
+    """What a step lacks for its kind, or has too much of."""
+    kind = step.get("kind")
+    if not isinstance(kind, str) or kind not in _NEEDS:
+        return
+    for keys, what in _NEEDS[kind]:
+        if not step.keys() & set(keys):
+            yield f": a {kind} step also needs {what}"
+    for key, why in _MUST_NOT[kind].items():
+        if key in step:
+            yield f".{key}: a {kind} step has none, as {why}"
+    if "volts" in step and "volts_kind" not in step:
+        yield ': volts also need volts_kind, "rms" or "peak"'
+    if {"power_w", "volts"} <= step.keys():
+        yield ": has power_w and volts; wanted one of them"
+
+
+def _count_faults(step: dict[str, Any], most: object) -> Iterator[str]:
+    """Counts above full scale: of another converter, or a slip of the hand."""
+    for key in ("forward", "reflected"):
+        count = step.get(key)
+        if isinstance(count, int | float) and isinstance(most, int) and most < count < math.inf:
+            yield f".{key}: found {short(count)}; wanted at most full_scale, {short(most)} (mean counts)"
+
+
+_HERTZ = (("frequency_hz",), "frequency_hz (hertz)")
+_WATTS = (("power_w", "volts"), "power_w (watts, the wattmeter's reading) or volts across the dummy load")
+#: kind of step -> keys of which it needs one, and how to say so.
+_NEEDS: dict[str, tuple[tuple[tuple[str, ...], str], ...]] = {
+    "dark": (),
+    "power": (_HERTZ, _WATTS),
+    "reversed": (_HERTZ, _WATTS),
+    "load": (_HERTZ, (("load",), 'load (ohms, like "100", "open" or "short")')),
 }
-_MODELS: dict[str, type[_Model]] = {"bridge": _BridgeModel, "bench": _BenchModel, "step": _StepModel}
-
-
-def _fault(error: Any) -> str:
-    """One pydantic error in our words: path, what was found, what is wanted."""
-    where = _path(error["loc"])
-    say = _WORDS.get(error["type"])
-    return f"{where}: {say(error)}" if say else f"{where}: found {error['input']!r}; {error['msg']}"
-
-
-def _path(loc: tuple[int | str, ...]) -> str:
-    """step[3].power_w: steps are counted from 1, as people do."""
-    text = ""
-    for part in loc:
-        text += f"[{part + 1}]" if isinstance(part, int) else f".{part}" if text else str(part)
-    return text or "file"
-
-
-def _wanted(error: Any, what: str) -> str:
-    unit = _UNITS.get(str(error["loc"][-1])) if error["loc"] else None
-    return f"found {_short(error['input'])}; wanted {what}{f' ({unit})' if unit else ''}"
-
-
-def _short(value: object) -> str:
-    text = repr(value)
-    return text if len(text) <= 60 else f"{text[:57]}..."
-
-
-def _limits(error: Any) -> str:
-    limits = error.get("ctx", {})
-    words = {"gt": "more than", "ge": "at least", "lt": "less than", "le": "at most"}
-    return _wanted(error, " and ".join(f"{words[key]} {limits[key]:g}" for key in words if key in limits))
-
-
-def _extra(error: Any) -> str:
-    loc = error["loc"]
-    model = _FileModel if len(loc) == 1 else _MODELS.get(str(loc[0]), _FileModel)
-    known = [field.alias or name for name, field in model.model_fields.items()]
-    near = difflib.get_close_matches(str(loc[-1]), known, n=1, cutoff=0.5)
-    hint = f"did you mean {near[0]}?" if near else f"known here: {', '.join(known)}"
-    return f"no such key; {hint}"
-
-
-def _missing(error: Any) -> str:
-    unit = _UNITS.get(str(error["loc"][-1]))
-    return f"is missing{f'; wanted {unit}' if unit else ''}"
-
-
-_WORDS: dict[str, Callable[[Any], str]] = {
-    "missing": _missing,
-    "extra_forbidden": _extra,
-    "float_type": lambda error: _wanted(error, "a number"),
-    "int_type": lambda error: _wanted(error, "a whole number"),
-    "string_type": lambda error: _wanted(error, "text in quotes"),
-    "finite_number": lambda error: _wanted(error, "a finite number"),
-    "literal_error": lambda error: _wanted(error, f"one of {error['ctx']['expected']}"),
-    "string_pattern_mismatch": lambda error: _wanted(error, "1 to 8 hexadecimal digits"),
-    "value_error": lambda error: f"{str(error['msg']).removeprefix('Value error, ')}",
-    "greater_than": _limits,
-    "greater_than_equal": _limits,
-    "less_than": _limits,
-    "less_than_equal": _limits,
-    "model_type": lambda error: _wanted(error, "a table"),
-    "dict_type": lambda error: _wanted(error, "a table"),
-    "list_type": lambda error: _wanted(error, "[[step]] tables"),
+#: kind of step -> keys that contradict it, and why.
+_MUST_NOT: dict[str, dict[str, str]] = {
+    "dark": dict.fromkeys(("frequency_hz", "power_w", "volts", "load"), "the transmitter is off"),
+    "power": {"load": "it is taken into the dummy load"},
+    "reversed": {"load": "it is taken into the dummy load"},
+    "load": {},
+}
+_MODELS: dict[str, type[_Model]] = {"": _FileModel, "bridge": _BridgeModel, "bench": _BenchModel, "step": _StepModel}
+#: table -> keys known there.
+_KNOWN = {
+    table: [field.alias or name for name, field in model.model_fields.items()] for table, model in _MODELS.items()
 }

@@ -12,4 +12,8 @@ class LinkError(BridgeIOError):
 
 
 class FileError(BridgeIOError):
-    """A file is missing, unreadable or wrong. The command line leaves with exit code 3."""
+    """A file is missing, unreadable or wrong, in one or more faults, an argument each. The exit code is 3."""
+
+    def __str__(self) -> str:
+        """All faults, a line each; who shows them takes `args`, as a fault may hold a line end from outside."""
+        return "\n".join(map(str, self.args))

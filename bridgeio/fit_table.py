@@ -6,9 +6,13 @@ calibration, is noticed.
 
 from __future__ import annotations
 
+import json
 import math
 import os
+import re
+import shlex
 import tempfile
+import tomllib
 from dataclasses import dataclass
 from datetime import datetime
 from pathlib import Path
@@ -19,12 +23,12 @@ import numpy as np
 from calibration import __version__
 from calibration.bridge import Band, Bridge
 from calibration.fit import Fit
-from calibration.laws import LAWS
+from calibration.laws import LAWS, Law
 
 from .errors import FileError
 from .framing import crc16
 
-__all__ = ["FitTable", "write_fit", "write_whole"]
+__all__ = ["FitTable", "toml_text", "write_fit", "write_whole"]
 
 #: The numbers of a band in the file, beside its covariance.
 _BAND_KEYS = (
@@ -38,6 +42,10 @@ _BAND_KEYS = (
     "angle_cosine",
 )
 _SIDES = ("forward", "reflected")
+#: The comment above the table; found again, and not doubled, when a file is fitted anew.
+_MARK = "# Written by `bridgewright fit`; not meant to be edited: id tells when a number has changed."
+_TABLE = re.compile(r"[ \t]*\[")
+_FIT_TABLE = re.compile(r"[ \t]*\[\[?[ \t]*(fit|\"fit\"|'fit')[ \t]*[.\]]")
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,12 +75,14 @@ class FitTable:
     @classmethod
     def read(cls, content: dict[str, Any], source: str) -> FitTable:
         """The table as found in a file. FileError where it is not whole or its numbers have changed."""
-        again = f"run `bridgewright fit {source} -o {source}` to write it anew"
+        path = shlex.quote(source)
+        again = f"run `bridgewright fit {path} -o {path}` to write it anew"
         try:
             found, expected = int(str(content["id"]), 16), _id_of(content)
             table = cls(found, content)
-            table.bridge("", 1, 50.0, None)
-        except (KeyError, TypeError, ValueError) as error:
+            if found == expected:
+                table.bridge("", 1, 50.0, None)
+        except (AttributeError, KeyError, TypeError, ValueError, OverflowError) as error:
             raise FileError(f"{source}: fit: is not whole ({type(error).__name__}: {error}); {again}") from error
         if found != expected:
             raise FileError(
@@ -89,7 +99,7 @@ class FitTable:
             full_scale=full_scale,
             forward_law=laws["forward"],
             reflected_law=laws["reflected"],
-            bands=tuple(_band_from(band) for band in self.content["band"]),
+            bands=self._bands(sum(len(law.parameters) + 1 for law in laws.values())),
             z0_ohm=z0_ohm,
             forward_sd=float(self.content["forward"]["sd"]),
             reflected_sd=float(self.content["reflected"]["sd"]),
@@ -97,28 +107,80 @@ class FitTable:
             device_id=device_id,
         )
 
-    def _law(self, side: str) -> Any:
+    def _law(self, side: str) -> Law:
         table = self.content[side]
-        return LAWS[table["law"]].from_parameters([float(value) for value in table["parameters"]])
+        law: Law = LAWS[table["law"]].from_table(table)
+        with np.errstate(all="ignore"):  # of the logarithm of what must be positive and is not
+            if not np.isfinite(law.parameters).all():
+                raise ValueError(f"the {side} law has a number out of range")
+        return law
+
+    def _bands(self, size: int) -> tuple[Band, ...]:
+        """The bands, each with a covariance of `size` parameters."""
+        bands = tuple(_band_from(band) for band in self.content["band"])
+        if not bands:
+            raise ValueError("no band")
+        for number, band in enumerate(bands, 1):
+            if band.covariance.shape != (size, size):
+                raise ValueError(f"band {number} has another covariance than {size} parameters need")
+        return bands
 
 
 def write_fit(path: str | Path, sheet: str, table: FitTable) -> None:
-    """Write the text of a bench sheet with `table` as its [fit] to `path`; comments and steps stay as they are."""
-    import tomlkit
+    """Write the text of a bench sheet with `table` as its [fit] to `path`; comments and steps stay as they are.
 
-    document = tomlkit.parse(sheet)
-    document.pop("fit", None)
-    text = tomlkit.dumps(document).rstrip() + "\n"
-    write_whole(path, text + "\n" + _dumps(table))
+    FileError where its own [fit] cannot be told from the rest, or nothing can be written.
+    """
+    kept = _without_fit(sheet)
+    before = tomllib.loads(sheet)
+    before.pop("fit", None)
+    # The same after as before, or nothing is written: what was measured is not to be measured again.
+    if _or_none(kept) != before:
+        raise FileError(
+            f"{path}: not written: the sheet holds [fit] in a form this program does not write; "
+            "wanted [fit] and [[fit.band]] as tables: remove it by hand"
+        )
+    ends = "\r\n" if "\r\n" in sheet else "\n"
+    write_whole(path, kept.rstrip() + ends + ends + _dumps(table).replace("\n", ends))
+
+
+def _without_fit(sheet: str) -> str:
+    """The lines of a sheet without its fit tables; comments that stand before what follows them are kept."""
+    kept: list[str] = []
+    remarks: list[str] = []
+    cutting = False
+    for line in sheet.split("\n"):
+        if _TABLE.match(line):
+            cutting = bool(_FIT_TABLE.match(line))
+            kept += [] if cutting else remarks
+            remarks = []
+        if line.rstrip() == _MARK:
+            continue
+        if not cutting:
+            kept.append(line)
+        elif not line.strip() or line.lstrip().startswith("#"):
+            remarks.append(line)
+        else:
+            remarks = []
+    return "\n".join(kept + remarks)
+
+
+def _or_none(text: str) -> dict[str, Any] | None:
+    try:
+        return tomllib.loads(text)
+    except tomllib.TOMLDecodeError:
+        return None
 
 
 def write_whole(path: str | Path, text: str) -> None:
     """Write a file whole or not at all: temporary file beside it, synced, renamed. FileError if that fails."""
     target = Path(path)
+    if target.exists() and not target.is_file():
+        raise FileError(f"{path}: is no file that could be replaced; wanted the name of a file, new or old")
     try:
         handle, temporary = tempfile.mkstemp(prefix=f".{target.name}.", dir=target.parent)
         try:
-            with os.fdopen(handle, "w", encoding="utf-8") as file:
+            with os.fdopen(handle, "w", encoding="utf-8", newline="") as file:
                 file.write(text)
                 file.flush()
                 os.fsync(file.fileno())
@@ -140,8 +202,7 @@ def _umask() -> int:
 
 def _dumps(table: FitTable) -> str:
     """The table as TOML, written by hand for its layout: a line a band, a line a residual."""
-    lines = ["# Written by `bridgewright fit`; not meant to be edited: id tells when a number has changed.", "[fit]"]
-    lines.append(f'id = "{table.id:04X}"')
+    lines = [_MARK, "[fit]", f'id = "{table.id:04X}"']
     content = table.content
     lines += [
         f"{key} = {_value(content[key])}" for key in ("date", "program", "reference_pct", "reference_scatter_pct")
@@ -160,18 +221,19 @@ def _dumps(table: FitTable) -> str:
 def _value(value: object) -> str:
     if isinstance(value, list):
         return f"[{', '.join(_value(one) for one in value)}]"
-    if isinstance(value, str):
-        import tomlkit
+    return toml_text(value) if isinstance(value, str) else repr(value)
 
-        return tomlkit.item(value).as_string()
-    return repr(value)
+
+def toml_text(text: str) -> str:
+    """Text in quotes as TOML wants it: JSON's escapes are TOML's, but for DEL, which JSON lets pass."""
+    return json.dumps(text, ensure_ascii=False).replace("\x7f", "\\u007f")
 
 
 def _side_of(bridge: Bridge, side: str) -> dict[str, Any]:
     law = bridge.forward_law if side == "forward" else bridge.reflected_law
     name = next(name for name, kind in LAWS.items() if isinstance(law, kind))
     sd = bridge.forward_sd if side == "forward" else bridge.reflected_sd
-    return {"law": name, "parameters": [float(value) for value in law.parameters], "sd": float(sd)}
+    return {"law": name, "sd": float(sd)} | law.table()
 
 
 def _band_of(band: Band) -> dict[str, Any]:
@@ -185,17 +247,27 @@ def _band_from(table: dict[str, Any]) -> Band:
     covariance = np.zeros((size, size))
     covariance[np.tril_indices(size)] = lower
     covariance = covariance + np.tril(covariance, -1).T
-    return Band(**{key: float(table[key]) for key in _BAND_KEYS}, covariance=covariance)
+    numbers: dict[str, Any] = {key: float(table[key]) for key in _BAND_KEYS}
+    if not np.isfinite([*numbers.values(), *lower]).all():
+        raise ValueError("a band holds a number that is not finite")
+    return Band(**numbers, covariance=covariance)
 
 
 def _id_of(content: dict[str, Any]) -> int:
     """CRC-16 over the fitted numbers, one a line: keys sorted, shortest round-trip decimals; 0 becomes 1."""
     numbers = {"reference_pct": content["reference_pct"]}
     for side in _SIDES:
-        numbers |= {f"{side}.{n}": value for n, value in enumerate(content[side]["parameters"])}
-        numbers[f"{side}.sd"] = content[side]["sd"]
+        for key, value in content[side].items():
+            numbers |= _numbers_of(f"{side}.{key}", value)
     for place, band in enumerate(content["band"]):
         numbers |= {f"band.{place}.{key}": band[key] for key in _BAND_KEYS}
         numbers |= {f"band.{place}.covariance.{n}": value for n, value in enumerate(band["covariance"])}
     lines = "".join(f"{key} = {float(numbers[key])!r}\n" for key in sorted(numbers))
     return crc16(lines.encode("ascii")) or 1
+
+
+def _numbers_of(key: str, value: Any) -> dict[str, float]:
+    """The numbers of one key: itself, or a list's members by their place; texts have none."""
+    if isinstance(value, list):
+        return {f"{key}.{place}": float(one) for place, one in enumerate(value)}
+    return {} if isinstance(value, str) else {key: float(value)}

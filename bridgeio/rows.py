@@ -20,8 +20,8 @@ __all__ = ["COLUMNS", "FORMATS", "csv_header", "csv_rows", "json_rows", "rfc3339
 
 
 def rfc3339(time_s: float) -> str | None:
-    """RFC 3339 UTC with milliseconds and Z of seconds since 1970; None for NaN."""
-    if math.isnan(time_s):
+    """RFC 3339 UTC with milliseconds and Z of seconds since 1970; None for NaN or infinity."""
+    if not math.isfinite(time_s):
         return None
     stamp = datetime.fromtimestamp(round(time_s * 1000.0) / 1000.0, UTC)
     return f"{stamp:%Y-%m-%dT%H:%M:%S}.{stamp.microsecond // 1000:03d}Z"
@@ -31,7 +31,8 @@ def json_rows(batch: TimedReadings, bridge: str | None, averaged: int = 1) -> It
     """One JSON object a reading, without line ends."""
     names = list(COLUMNS)
     for row in _rows(batch, bridge, averaged):
-        yield json.dumps(dict(zip(names, row, strict=True)), allow_nan=False)
+        # All but plain ASCII becomes an escape, so that no name drives a terminal.
+        yield json.dumps(dict(zip(names, row, strict=True)), allow_nan=False, ensure_ascii=True)
 
 
 def csv_header() -> str:
@@ -40,7 +41,10 @@ def csv_header() -> str:
 
 
 def csv_rows(batch: TimedReadings, bridge: str | None, averaged: int = 1) -> Iterator[str]:
-    """One line a reading, without line ends: RFC 4180 quoting, empty for unknown, flags parted by a space."""
+    """One line a reading, without line ends: RFC 4180 quoting, empty for unknown, flags parted by a space.
+
+    What cannot be printed is written as an escape, so that a line stays a line and drives no terminal.
+    """
     for row in _rows(batch, bridge, averaged):
         yield ",".join(_cell(value) for value in row)
 
@@ -53,10 +57,16 @@ def _rows(batch: TimedReadings, bridge: str | None, averaged: int) -> Iterator[t
 def _cell(value: Any) -> str:
     if value is None:
         return ""
-    text = " ".join(value) if isinstance(value, list) else str(value)
-    if isinstance(value, str) and text[:1] in ("=", "+", "-", "@", "\t", "\r"):
-        text = f"'{text}"  # a spreadsheet would run it as a formula
-    return f'"{text.replace(chr(34), chr(34) * 2)}"' if any(char in text for char in ',"\r\n') else text
+    if not isinstance(value, str):
+        return " ".join(value) if isinstance(value, list) else str(value)
+    text = "".join(char if char.isprintable() else char.encode("unicode_escape").decode("ascii") for char in value)
+    if text.startswith(_FORMULA):
+        text = f"'{text}"
+    return f'"{text.replace(chr(34), chr(34) * 2)}"' if "," in text or '"' in text else text
+
+
+#: What a cell must not begin with: a spreadsheet would run it as a formula (the last four are their wide forms).
+_FORMULA = ("=", "+", "-", "@", "\uff1d", "\uff0b", "\uff0d", "\uff20")
 
 
 Column = Callable[[TimedReadings, str | None, int], list[Any]]
@@ -64,7 +74,7 @@ Column = Callable[[TimedReadings, str | None, int], list[Any]]
 
 def _of(name: str) -> Column:
     def column(batch: TimedReadings, _bridge: str | None, _averaged: int) -> list[Any]:
-        return [None if value != value else value for value in getattr(batch.readings, name).tolist()]
+        return [value if math.isfinite(value) else None for value in getattr(batch.readings, name).tolist()]
 
     return column
 

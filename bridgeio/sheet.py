@@ -10,6 +10,8 @@ from dataclasses import fields
 
 from calibration.bench import BenchRatings, BenchStep
 
+from .fit_table import toml_text
+
 __all__ = ["sheet_of"]
 
 _DEFAULTS = {field.name: field.default for field in fields(BenchStep)}
@@ -27,12 +29,15 @@ def sheet_of(
     comment: str,
     device_id: int | None = None,
 ) -> str:
-    """TOML text of a bench sheet for a bridge with diode detectors; `comment` is its first line."""
-    lines = [f"# {comment}", "schema = 1", "", "[bridge]", f'name = "{name}"']
+    """TOML text of a bench sheet for a bridge with diode detectors; `comment` is its first line, or lines."""
+    lines = [f"# {line}" for line in comment.splitlines()]
+    lines += ["schema = 1", "", "[bridge]", f"name = {toml_text(name)}"]
     lines += [f"full_scale = {full_scale}     # the largest count a tally can hold", "z0_ohm = 50.0"]
     lines += ['detector = "diode"', *([f'diode = "{diode}"'] if diode else [])]
     lines += [] if device_id is None else [f'device_id = "{device_id:08X}"']
     lines += ["", "[bench]", f"reference_pct = {ratings.reference_pct}    # accuracy of the reference wattmeter, 95 %"]
+    if ratings.reference_full_scale_w is not None:
+        lines += [f"reference_full_scale_w = {ratings.reference_full_scale_w}    # that percentage is of this"]
     lines += [f"dummy_return_loss_db = {ratings.dummy_return_loss_db}    # the dummy load's worst case"]
     lines += [f"resistor_pct = {ratings.resistor_pct}    # tolerance of the known loads"]
     for step in steps:
@@ -52,7 +57,8 @@ def _step_lines(step: BenchStep) -> list[str]:
 
 def _value(value: object) -> str:
     if isinstance(value, str):
-        return f'"{value}"'
-    if isinstance(value, float) and value.is_integer() and abs(value) >= 1e5:
+        return toml_text(value)
+    if isinstance(value, float) and value.is_integer() and 1e5 <= abs(value) < 1e15:
         return f"{int(value):_}"
-    return repr(value)
+    # numpy's numbers are floats too, but write themselves as np.float64(1.0).
+    return repr(float(value)) if isinstance(value, float) else str(value)

@@ -1,7 +1,8 @@
 """The command line: finds the command, runs it, and turns errors into words and exit codes.
 
 One rule: nothing heavy is imported here; `--version` and `--help` must answer at once.
-Exit codes: 0 done, 2 usage, 3 a file is wrong, 4 the port or link failed, 5 the data cannot carry what was asked.
+Exit codes: 0 done, 2 usage, 3 a file is wrong, 4 the port or link failed, 5 the data cannot carry what was asked,
+130 stopped by Ctrl-C.
 """
 
 from __future__ import annotations
@@ -9,6 +10,7 @@ from __future__ import annotations
 import argparse
 import difflib
 import importlib
+import io
 import os
 import sys
 from collections.abc import Sequence
@@ -20,26 +22,52 @@ from tui.door import say, visible
 
 __all__ = ["main"]
 
-DONE, USAGE, FILE_WRONG, LINK_FAILED, DATA_SHORT = 0, 2, 3, 4, 5
+DONE, USAGE, FILE_WRONG, LINK_FAILED, DATA_SHORT, STOPPED = 0, 2, 3, 4, 5, 130
 
 
 def main(argv: Sequence[str] | None = None) -> int:
     """Run the command line `argv` (sys.argv unless given) and return the exit code."""
     words = list(sys.argv[1:] if argv is None else argv)
+    for name in ("stdout", "stderr"):
+        _settle_output(name)
     try:
-        return _run(words)
-    except BrokenPipeError:
-        # The reader of our output has left (`| head`): done. Python would complain again when it flushes at exit.
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        code = _run(words)
+        sys.stdout.flush()
+        return code
+    except BrokenPipeError:  # the reader of our output has left (`| head`): done
+        _abandon_output()
         return DONE
+    except OSError as error:  # ports and files have their own words: this is standard output, on a full disk
+        _abandon_output()
+        say(f"bridgewright: cannot go on: {error.strerror or error}")
+        return FILE_WRONG
     except KeyboardInterrupt:
-        return 130
+        return STOPPED
     except UnitError as error:
-        say(f"bridgewright: {error}")
-        return USAGE
+        return _told(error, USAGE)
     except CalibrationError as error:
-        say(f"bridgewright: {error}")
-        return DATA_SHORT
+        return _told(error, DATA_SHORT)
+
+
+def _told(error: Exception, code: int) -> int:
+    """Say what an error says, a line for each of its arguments, whatever they hold; returns `code`."""
+    for words in error.args:
+        say(visible(f"bridgewright: {words}"))
+    return code
+
+
+def _settle_output(name: str) -> None:
+    """Let the stream `name` of sys take any text: where it is closed nobody is there to read, which is no fault."""
+    stream = getattr(sys, name)
+    if stream is None:
+        setattr(sys, name, open(os.devnull, "w", encoding="utf-8"))  # noqa: SIM115 - open until we leave
+    elif isinstance(stream, io.TextIOWrapper):  # a name may hold what the encoding of this terminal does not
+        stream.reconfigure(errors="backslashreplace")
+
+
+def _abandon_output() -> None:
+    """Write nothing more: Python would fail again when it flushes at exit, and say so."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
 
 
 def _run(words: list[str]) -> int:
@@ -52,11 +80,14 @@ def _run(words: list[str]) -> int:
     name, rest = _command_of(words)
     if name not in COMMANDS:
         near = difflib.get_close_matches(name, COMMANDS, n=1)
-        hint = f"; did you mean {near[0]}?" if near else ""
-        say(f"bridgewright: unknown command {name!r}{hint}; known: {', '.join(COMMANDS)}")
+        hint = f"did you mean {near[0]}? " if near else ""
+        say(f"bridgewright: there is no command {name!r}; {hint}known: {', '.join(COMMANDS)}")
         return USAGE
     module = importlib.import_module(COMMANDS[name].module)
-    args = _parser(name, module).parse_args(rest)
+    try:
+        args = _parser(name, module).parse_args(rest)
+    except SystemExit as leaving:  # --help, or a word that the parser has refused
+        return int(leaving.code or DONE)
     return _answering_for_files(module, args)
 
 
@@ -74,23 +105,23 @@ def _command_of(words: list[str]) -> tuple[str, list[str]]:
 
 def _answering_for_files(module: object, args: argparse.Namespace) -> int:
     # Imported here: bridgeio's errors cost nothing, but keep the start free of it all the same.
-    from bridgeio.errors import FileError, LinkError
+    from bridgeio.errors import BridgeIOError, FileError, LinkError
 
     try:
         return int(module.run(args))  # type: ignore[attr-defined]
     except FileError as error:
-        say(f"bridgewright: {error}")
-        return FILE_WRONG
+        return _told(error, FILE_WRONG)
     except LinkError as error:
-        say(f"bridgewright: {error}")
-        return LINK_FAILED
+        return _told(error, LINK_FAILED)
+    except BridgeIOError as error:  # what is left is a pattern that cannot be used: a word of the command line
+        return _told(error, USAGE)
 
 
 class _Parser(argparse.ArgumentParser):
     """argparse whose errors pass the door: they echo what was typed."""
 
     def error(self, message: str) -> None:  # type: ignore[override]
-        say(f"{self.prog}: {message}\ntry: {self.prog} --help")
+        say(f"{visible(f'{self.prog}: {message}')}\ntry: {self.prog} --help")
         raise SystemExit(USAGE)
 
 

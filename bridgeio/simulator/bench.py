@@ -6,6 +6,7 @@ good as a careful builder's, and no better.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -16,7 +17,7 @@ from calibration.bench import BenchRatings, BenchStep
 from . import coupler, detector, feed
 from .station import source_lift
 
-__all__ = ["FREQUENCIES_HZ", "RATINGS", "bench_steps"]
+__all__ = ["FREQUENCIES_HZ", "RATINGS", "Setup", "bench_setups", "bench_steps"]
 
 Array = npt.NDArray[np.float64]
 
@@ -68,87 +69,109 @@ LOADS: dict[str, _Part] = {
 }
 
 
+@dataclass(frozen=True, slots=True)
+class Setup:
+    """A step as it is set up, before anything counts: RF peak volts [V] at the forward and the reflected detector,
+    and what the sheet will say of it."""
+
+    kind: str
+    ports_v: tuple[float, float]
+    frequency_hz: float | None = None
+    power_w: float | None = None
+    load: str | None = None
+    line_deg: float = 0.0
+
+    def step(self, forward: Array, reflected: Array) -> BenchStep:
+        """Return the step with mean and scatter of the tallies [counts, n] of either channel, as a sheet shows them."""
+        (nf, sd_f), (nr, sd_r) = (
+            (round(float(tallies.mean()), 2), round(float(tallies.std(ddof=1)), 2)) for tallies in (forward, reflected)
+        )
+        return BenchStep(
+            self.kind,
+            nf,
+            nr,
+            frequency_hz=self.frequency_hz,
+            power_w=self.power_w,
+            load=self.load,
+            line_deg=self.line_deg,
+            forward_sd=sd_f,
+            reflected_sd=sd_r,
+            samples=len(forward),
+        )
+
+
 def bench_steps(seed: int = 1) -> list[BenchStep]:
     """Return the steps of the simulated bench, in the order they were taken; noise and scatter follow `seed`.
 
     Dark; eight powers on 20 m and three on each other band; the bridge turned, four powers and one; known
     loads, two of them also behind line, on three bands, open and short at 1 W only.
     """
-    bench = _Bench(seed)
-    steps = [bench.dark()]
+    chance = np.random.default_rng([seed, 2])
+    converter = _Converter(chance)
+    # One setup at a time: wattmeter and converter draw from one chance, in the order of the bench.
+    return [setup.step(*converter.tallies(setup)) for setup in _setups(chance)]
+
+
+def bench_setups(seed: int = 1) -> list[Setup]:
+    """Return what the same bench sets up, step by step, for a converter other than the simulator's own."""
+    return list(_setups(np.random.default_rng([seed, 2])))
+
+
+def _setups(chance: np.random.Generator) -> Iterator[Setup]:
+    bench = _Bench(chance)
+    yield Setup("dark", (0.0, 0.0))
     for kind, (main_w, other_w) in POWERS_W.items():
         for frequency_hz in FREQUENCIES_HZ:
             watts = main_w if frequency_hz == MAIN_HZ else other_w
-            steps += [bench.power(kind, frequency_hz, power_w) for power_w in watts]
+            yield from (bench.power(kind, frequency_hz, power_w) for power_w in watts)
     for frequency_hz in LOADED_HZ:
-        steps += [bench.load(frequency_hz, name, 5.0) for name in ("25", "100", "16.67", "150")]
-        steps += [bench.load(frequency_hz, name, 5.0, line_deg=45.0) for name in ("25", "100")]
-        steps += [bench.load(frequency_hz, name, 1.0) for name in ("open", "short")]
-    return steps
+        yield from (bench.load(frequency_hz, name, 5.0) for name in ("25", "100", "16.67", "150"))
+        yield from (bench.load(frequency_hz, name, 5.0, line_deg=45.0) for name in ("25", "100"))
+        yield from (bench.load(frequency_hz, name, 1.0) for name in ("open", "short"))
 
 
 class _Bench:
-    """Bridge, transmitter, wattmeter and parts, at 25 C."""
+    """Bridge, transmitter, wattmeter and parts."""
 
-    def __init__(self, seed: int) -> None:
-        self._chance = np.random.default_rng([seed, 2])
-        self._detectors = [(part, detector.Table(part, 25.0)) for part in (detector.FORWARD, detector.REFLECTED)]
+    def __init__(self, chance: np.random.Generator) -> None:
+        self._chance = chance
 
-    def dark(self) -> BenchStep:
-        """Transmitter off."""
-        return self._step("dark", np.zeros(2))
-
-    def power(self, kind: str, frequency_hz: float, power_w: float) -> BenchStep:
+    def power(self, kind: str, frequency_hz: float, power_w: float) -> Setup:
         """Dummy load; the wattmeter between bridge and dummy says the power. "reversed" turns the bridge."""
         looking = coupler.looking_back if kind == "reversed" else coupler.looking_forward
         ports_v = _ports_v(looking(frequency_hz), DUMMY.gamma(frequency_hz), power_w)
         said_w = power_w * METER_GAIN * (1.0 + METER_SCATTER * self._chance.standard_normal())
-        return self._step(kind, ports_v, frequency_hz=frequency_hz, power_w=float(f"{said_w:.4g}"))
+        return Setup(kind, ports_v, frequency_hz=frequency_hz, power_w=float(f"{said_w:.4g}"))
 
-    def load(self, frequency_hz: float, name: str, power_w: float, line_deg: float = 0.0) -> BenchStep:
+    def load(self, frequency_hz: float, name: str, power_w: float, line_deg: float = 0.0) -> Setup:
         """A known load, directly or behind line; power [W] as the transmitter gives a matched one."""
         gamma = LOADS[name].gamma(frequency_hz)
         if line_deg:
             gamma *= 10.0 ** (-LINE_LOSS_DB / 10.0) * np.exp(-2j * np.radians(LINE_DEG))
         ports_v = _ports_v(coupler.looking_forward(frequency_hz), gamma, power_w)
-        return self._step("load", ports_v, frequency_hz=frequency_hz, load=name, line_deg=line_deg)
+        return Setup("load", ports_v, frequency_hz=frequency_hz, load=name, line_deg=line_deg)
 
-    def _step(
-        self,
-        kind: str,
-        ports_v: Array,
-        *,
-        frequency_hz: float | None = None,
-        power_w: float | None = None,
-        load: str | None = None,
-        line_deg: float = 0.0,
-    ) -> BenchStep:
-        (forward, forward_sd), (reflected, reflected_sd) = (
-            self._counts(side, peak_v) for side, peak_v in enumerate(ports_v.tolist())
-        )
-        return BenchStep(
-            kind,
-            forward,
-            reflected,
-            frequency_hz=frequency_hz,
-            power_w=power_w,
-            load=load,
-            line_deg=line_deg,
-            forward_sd=forward_sd,
-            reflected_sd=reflected_sd,
-            samples=SAMPLES,
-        )
 
-    def _counts(self, side: int, peak_v: float) -> tuple[float, float]:
-        """Mean and scatter [counts] of SAMPLES tallies, each a sum of conversions, as a sheet shows them."""
+class _Converter:
+    """Detectors and converter of the simulated board, at 25 C."""
+
+    def __init__(self, chance: np.random.Generator) -> None:
+        self._chance = chance
+        self._detectors = [(part, detector.Table(part, 25.0)) for part in (detector.FORWARD, detector.REFLECTED)]
+
+    def tallies(self, setup: Setup) -> list[Array]:
+        """SAMPLES tallies [counts] of the forward and of the reflected channel, each a sum of conversions."""
+        return [self._count(side, peak_v) for side, peak_v in enumerate(setup.ports_v)]
+
+    def _count(self, side: int, peak_v: float) -> Array:
         part, table = self._detectors[side]
         noise = self._chance.standard_normal((SAMPLES, detector.SUMMED))
         dc_v = np.full(noise.shape, table.dc_v(np.asarray(peak_v)))
-        tallies = detector.convert(part, dc_v, noise).sum(axis=1)
-        return round(float(tallies.mean()), 2), round(float(tallies.std(ddof=1)), 2)
+        return np.asarray(detector.convert(part, dc_v, noise).sum(axis=1))
 
 
-def _ports_v(ports: coupler.Ports, gamma: complex, power_w: float) -> Array:
+def _ports_v(ports: coupler.Ports, gamma: complex, power_w: float) -> tuple[float, float]:
     """RF peak volts [V] at the forward and reflected detector."""
-    wave_v = np.sqrt(2.0 * feed.Z0_OHM * power_w) * source_lift(gamma)
-    return np.asarray([wave_v * amplitude for amplitude in ports.amplitudes(gamma)], dtype=float).reshape(2)
+    wave_v = float(np.sqrt(2.0 * feed.Z0_OHM * power_w) * source_lift(gamma))
+    forward, reflected = ports.amplitudes(gamma)
+    return wave_v * float(forward), wave_v * float(reflected)

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["FORWARD", "REFLECTED", "SUMMED", "ZERO_C", "Detector", "Held", "Table", "convert", "solve_dc_v"]
+__all__ = ["FORWARD", "REFLECTED", "SUMMED", "ZERO_C", "Detector", "Held", "Table", "convert", "pin_v", "solve_dc_v"]
 
 Array = npt.NDArray[np.float64]
 
@@ -116,7 +116,12 @@ class Held:
         return np.asarray(np.exp(fallen - t_s / self._hold_s))
 
 
+def pin_v(detector: Detector, dc_v: Array) -> Array:
+    """Volts [V] at the converter's pin: the held `dc_v` [V] through the divider, and the offset; any shape."""
+    return np.asarray(dc_v * detector.divider + detector.offset_codes * REFERENCE_V / TOP_CODE)
+
+
 def convert(detector: Detector, dc_v: Array, noise: Array) -> Array:
     """Codes 0..TOP_CODE of conversions of `dc_v` [V]; `noise` is standard normal, of the same shape."""
-    level = dc_v * (detector.divider * TOP_CODE / REFERENCE_V) + detector.offset_codes
+    level = pin_v(detector, dc_v) * (TOP_CODE / REFERENCE_V)
     return np.clip(np.rint(level + NOISE_CODES * noise), 0.0, float(TOP_CODE))

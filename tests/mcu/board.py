@@ -68,9 +68,9 @@ needs_gcc = pytest.mark.skipif(not _HAVE_GCC, reason="no C compiler: apt install
 needs_board = pytest.mark.skipif(not _HAVE_BOARD, reason=f"no simulated board: {APT}")
 
 
-def code(millivolts: int) -> int:
-    """What the simulated converter makes of a voltage [mV] against the example's reference."""
-    return min(millivolts * FULL_CODE // REFERENCE_MV, FULL_CODE)
+def code(millivolts: float) -> int:
+    """What the simulated converter makes of a voltage [mV, to a tenth] against the example's reference."""
+    return min(round(10 * millivolts) * FULL_CODE // (10 * REFERENCE_MV), FULL_CODE)
 
 
 def run_tool(*words: str | Path) -> str:
@@ -108,7 +108,7 @@ def avr_elf(*defines: str, source: str = "bridge.c") -> Path:
 
 
 class Board:
-    """A running chip. `waveform` holds (ms, forward_mv, reflected_mv), each in force until the next.
+    """A running chip. `waveform` holds (ms, forward_mv, reflected_mv), each in force until the next; mV to a tenth.
 
     It is held until `run()`, so that a reader can open `path` first and miss nothing; after `stop_after_ms` of
     simulated time it falls silent and stays so until it is left.
@@ -118,7 +118,7 @@ class Board:
 
     def __init__(
         self,
-        waveform: Iterable[tuple[float, int, int]] = (),
+        waveform: Iterable[tuple[float, float, float]] = (),
         *,
         firmware: Path | None = None,
         paced: bool = False,
@@ -134,7 +134,7 @@ class Board:
     def __enter__(self) -> Self:
         elf = self._firmware or avr_elf()
         with tempfile.NamedTemporaryFile("w", dir=workshop(), suffix=".wave", delete=False) as file:
-            file.writelines(f"{ms:.6f} {forward} {reflected}\n" for ms, forward, reflected in self._waveform)
+            file.writelines(f"{ms:.6f} {forward:.1f} {reflected:.1f}\n" for ms, forward, reflected in self._waveform)
         self._child = subprocess.Popen(
             [harness(), *self._options, "--waveform", file.name, elf],
             stdin=subprocess.PIPE,
@@ -178,15 +178,16 @@ class Board:
         self._tell("quit")
         self._child.wait(PATIENCE_S)
 
-    def heard(self, word: str, timeout_s: float = PATIENCE_S) -> list[str]:
-        """What the harness said after `word`, once it has (see mcu.c: pty, baud, reset, end)."""
+    def heard(self, word: str, timeout_s: float = PATIENCE_S, nth: int = 1) -> list[str]:
+        """What the harness said after its nth `word`, once it has (see mcu.c: pty, baud, conversion, reset, end)."""
 
         def lines() -> list[str]:
             return [line for line in self._said if line.split()[:1] == [word]]
 
         with self._news:
-            assert self._news.wait_for(lines, timeout_s), f"the board never said {word!r}, only {self._said[-5:]}"
-            return lines()[0].split()[1:]
+            told = self._news.wait_for(lambda: len(lines()) >= nth, timeout_s)
+            assert told, f"the board never said {word!r} (number {nth}), only {self._said[-5:]}"
+            return lines()[nth - 1].split()[1:]
 
     def cycles(self) -> list[int]:
         """Cycles between marks, so far."""

@@ -3,12 +3,14 @@
  * One rule: nothing is lost and nothing hangs. When nobody reads the line, simulated time stops; every wait has a
  * time-out; when standard input ends, so does the run.
  *
- * Standard output tells, a line each:  pty PATH | baud N | cycles N | reset MS | end MS BYTES  (MS is simulated
- * time since the start). Standard input takes, a line each:  run | reset | quit. After the end the line stays up, silent,
- * until quit, so that what is still under way reaches the reader.
+ * Standard output tells, a line each:  pty PATH | baud N | cycles N | conversion MS | reset MS | end MS BYTES  (MS is
+ * simulated time since the start; of the conversions only the first two after a start or reset are told: the example's
+ * first is for settling, on the second's time its raster hangs). Standard input takes, a line each:  run | reset |
+ * quit. After the end the line stays up, silent, until quit, so that what is still under way reaches the reader.
  *
  * The waveform file holds lines `ms forward_mv reflected_mv`, times rising; each line holds until the next, the
- * last one for ever, and before the first both inputs are at 0. Time runs from the last start or reset.
+ * last one for ever, and before the first both inputs are at 0. Time runs from the last start or reset; millivolts
+ * are taken to a tenth.
  *
  * SPDX-License-Identifier: MIT
  */
@@ -36,6 +38,10 @@
 #define NS_A_MS 1000000LL
 #define SUPPLY_MV 5000
 #define AREF_MV 2500
+/* The simulator's converter takes whole numbers. A step of it is 1.07 mV: whole millivolts would beat against it, and
+ * what was meant as a smooth voltage would come out as a saw tooth of half a step. */
+#define UNITS_A_MV 10
+#define CONVERSIONS_TOLD 2
 #define PATIENCE_MS 250 /* no single wait is longer */
 #define LONGEST_LINGER_MS 60000
 #define LONGEST_LAG_NS (20 * NS_A_MS)
@@ -49,7 +55,7 @@
 
 struct step {
     double ms;
-    uint32_t forward_mv, reflected_mv;
+    uint32_t forward, reflected; /* in 1/UNITS_A_MV mV */
 };
 
 static struct {
@@ -64,6 +70,7 @@ static struct {
     avr_irq_t *adc;
     struct step *steps;
     size_t steps_n, step;
+    unsigned conversions; /* told since the last start */
     avr_cycle_count_t born, marked; /* cycle of the last start, of the last mark */
     int line;
     uint8_t pending[4096];
@@ -80,22 +87,24 @@ static void die(const char *what)
 
 /* ---- waveform -------------------------------------------------------------------------------------------- */
 
+static uint32_t to_units(double mv) { return (uint32_t)(mv * UNITS_A_MV + 0.5); }
+
 static void load_waveform(const char *path)
 {
     FILE *file = fopen(path, "r");
     size_t room = 0;
-    struct step step;
+    double ms, forward_mv, reflected_mv;
 
     if (!file)
         die(path);
-    while (fscanf(file, "%lf %u %u", &step.ms, &step.forward_mv, &step.reflected_mv) == 3) {
+    while (fscanf(file, "%lf %lf %lf", &ms, &forward_mv, &reflected_mv) == 3) {
         if (mcu.steps_n == room) {
             room = room ? 2 * room : 64;
             mcu.steps = realloc(mcu.steps, room * sizeof *mcu.steps);
             if (!mcu.steps)
                 die("waveform");
         }
-        mcu.steps[mcu.steps_n++] = step;
+        mcu.steps[mcu.steps_n++] = (struct step){ms, to_units(forward_mv), to_units(reflected_mv)};
     }
     errno = 0;
     if (!feof(file))
@@ -107,17 +116,21 @@ static void load_waveform(const char *path)
 static void on_conversion(avr_irq_t *irq, uint32_t value, void *param)
 {
     double ms = (double)(mcu.avr->cycle - mcu.born) / CYCLES_A_MS;
-    uint32_t forward_mv = 0, reflected_mv = 0;
+    uint32_t forward = 0, reflected = 0;
 
     (void)irq, (void)value, (void)param;
+    if (mcu.conversions < CONVERSIONS_TOLD) {
+        ++mcu.conversions;
+        printf("conversion %.6f\n", ms);
+    }
     while (mcu.step < mcu.steps_n && mcu.steps[mcu.step].ms <= ms)
         ++mcu.step;
     if (mcu.step > 0) {
-        forward_mv = mcu.steps[mcu.step - 1].forward_mv;
-        reflected_mv = mcu.steps[mcu.step - 1].reflected_mv;
+        forward = mcu.steps[mcu.step - 1].forward;
+        reflected = mcu.steps[mcu.step - 1].reflected;
     }
-    avr_raise_irq(mcu.adc + ADC_IRQ_ADC0 + asked.forward_input, forward_mv);
-    avr_raise_irq(mcu.adc + ADC_IRQ_ADC0 + asked.reflected_input, reflected_mv);
+    avr_raise_irq(mcu.adc + ADC_IRQ_ADC0 + asked.forward_input, forward);
+    avr_raise_irq(mcu.adc + ADC_IRQ_ADC0 + asked.reflected_input, reflected);
 }
 
 /* ---- serial line ----------------------------------------------------------------------------------------- */
@@ -167,6 +180,7 @@ static void reset(void)
     avr_reset(mcu.avr);
     mcu.born = mcu.avr->cycle;
     mcu.step = 0;
+    mcu.conversions = 0;
     printf("reset %.3f\n", simulated_ms());
 }
 
@@ -276,16 +290,28 @@ static void log_to_stderr(avr_t *avr, const int level, const char *format, va_li
         vfprintf(stderr, format, values);
 }
 
-static void find_uart(void)
+static avr_io_t *part(const char *kind)
 {
     avr_io_t *io = mcu.avr->io_port;
 
-    while (io && strcmp(io->kind, "uart"))
+    while (io && strcmp(io->kind, kind))
         io = io->next;
     if (!io)
-        die("the chip has no UART");
-    mcu.uart = (avr_uart_t *)io;
-    mcu.uart->flags = 0;
+        die(kind);
+    return io;
+}
+
+/* All voltages the converter compares are in its finer units, the internal reference too. */
+static void set_voltages(void)
+{
+    avr_adc_t *adc = (avr_adc_t *)part("adc");
+    size_t i;
+
+    mcu.avr->vcc = mcu.avr->avcc = SUPPLY_MV * UNITS_A_MV;
+    mcu.avr->aref = AREF_MV * UNITS_A_MV;
+    for (i = 0; i < sizeof adc->ref_values / sizeof *adc->ref_values; ++i)
+        if (adc->ref_values[i] == ADC_VREF_V110)
+            adc->ref_values[i] = ADC_VREF_V110 * UNITS_A_MV;
 }
 
 static void power_up(void)
@@ -299,12 +325,12 @@ static void power_up(void)
     avr_init(avr);
     avr->log = LOG_ERROR;
     avr->frequency = HZ;
-    avr->vcc = avr->avcc = SUPPLY_MV;
-    avr->aref = AREF_MV;
     avr->sleep = no_sleep;
     avr->run_cycle_limit = CYCLES_A_MS;
     avr_load_firmware(avr, &firmware);
-    find_uart();
+    set_voltages();
+    mcu.uart = (avr_uart_t *)part("uart");
+    mcu.uart->flags = 0;
     mcu.adc = avr_io_getirq(avr, AVR_IOCTL_ADC_GETIRQ, 0);
     avr_irq_register_notify(mcu.adc + ADC_IRQ_OUT_TRIGGER, on_conversion, NULL);
     avr_irq_register_notify(avr_io_getirq(avr, AVR_IOCTL_UART_GETIRQ('0'), UART_IRQ_OUTPUT), on_byte, NULL);

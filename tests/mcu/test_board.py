@@ -48,6 +48,14 @@ def test_paced_board_keeps_to_the_clock() -> None:
     assert time.monotonic() - began > 0.45
 
 
+def test_converter_takes_tenths_of_a_millivolt() -> None:
+    """A step of the converter lies between 10.7 and 10.8 mV, and is seen there: whole millivolts would beat with it."""
+    with Board([(0, 10.7, 10.8)], stop_after_ms=200) as board:
+        items = Receiver(from_start=True).feed(board.read_to_end())
+    last = [item for item in items if isinstance(item, Tallies)][-1]
+    assert (last.forward[-1], last.reflected[-1]) == (16 * 9, 16 * 10)
+
+
 def test_board_left_while_blocked_ends_its_child() -> None:
     """Leaving a board that nobody reads and that has no end in simulated time returns at once."""
     with Board() as board:

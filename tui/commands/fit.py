@@ -6,7 +6,10 @@ One rule: the steps are never altered; without -o nothing is written.
 from __future__ import annotations
 
 import argparse
+import sys
 from typing import TYPE_CHECKING
+
+from tui.door import say, visible
 
 if TYPE_CHECKING:
     from bridgeio.bridge_file import BridgeFile
@@ -14,6 +17,13 @@ if TYPE_CHECKING:
     from calibration.fit import Fit
 
 __all__ = ["EXAMPLE", "add_arguments", "run"]
+
+#: Residuals of this many times their expected variance are no noise.
+_CONTRADICTING = 4.0
+_CONTRADICT = (
+    "the steps cannot be fitted: they contradict each other or leave too much open; wanted in every band power steps "
+    "at different powers, each with counts of its own"
+)
 
 EXAMPLE = "bridgewright fit shed.bench.toml -o shed.bridge.toml"
 
@@ -28,31 +38,50 @@ def run(args: argparse.Namespace) -> int:
     """Fit, report, and write where told."""
     from datetime import UTC, datetime
 
-    from bridgeio.bridge_file import load_bridge_file, sheet_text
+    from bridgeio.bridge_file import parse_bridge_file, sheet_text
     from bridgeio.fit_table import FitTable, write_fit
-    from calibration.fit import fit
-    from tui.door import say, visible
 
-    sheet = load_bridge_file(args.file)
-    say(f"bridgewright fit: {len(sheet.steps)} steps of {sheet.name}; this takes some seconds")
-    found = fit(
-        list(sheet.steps),
-        name=sheet.name,
-        full_scale=sheet.full_scale,
-        z0_ohm=sheet.z0_ohm,
-        ratings=sheet.ratings,
-        match_return_loss_db=sheet.match_return_loss_db,
-        device_id=sheet.device_id,
-    )
-    for line in _report(sheet, found):
-        print(visible(line))
+    # Read once: what is fitted and what is written are then the same steps, whoever edits the file meanwhile.
+    text = sheet_text(args.file)
+    sheet = parse_bridge_file(text, args.file, steps_only=True)
+    say(visible(f"bridgewright fit: {len(sheet.steps)} steps of {sheet.name}; this takes some seconds"))
+    found = _fitted(sheet)
+    say("\n".join(visible(line) for line in _report(sheet, found)), sys.stdout)
     if args.output:
         table = FitTable.of_fit(found, datetime.now(UTC))
-        write_fit(args.output, sheet_text(args.file), table)
-        print(visible(f"written: {args.output}, fit id {table.id:04X}"))
+        write_fit(args.output, text, table)
+        say(visible(f"written: {args.output}, fit id {table.id:04X}"), sys.stdout)
     else:
-        print("nothing written; -o FILE writes the bridge file (it may name the same file)")
+        say("nothing written; -o FILE writes the bridge file (it may name the same file)", sys.stdout)
     return 0
+
+
+def _fitted(sheet: BridgeFile) -> Fit:
+    """The fit of the sheet. SheetError also where its numbers run away, which steps that contradict each other do."""
+    import numpy as np
+
+    from calibration.errors import CalibrationError, SheetError
+    from calibration.fit import fit
+
+    try:
+        with np.errstate(all="ignore"):
+            found = fit(
+                list(sheet.steps),
+                name=sheet.name,
+                full_scale=sheet.full_scale,
+                z0_ohm=sheet.z0_ohm,
+                detector=sheet.detector,
+                ratings=sheet.ratings,
+                match_return_loss_db=sheet.match_return_loss_db,
+                device_id=sheet.device_id,
+            )
+    except CalibrationError:
+        raise
+    except (ValueError, np.linalg.LinAlgError) as error:
+        raise SheetError(f"{_CONTRADICT} ({error})") from error
+    if not all(np.isfinite(band.covariance).all() for band in found.bridge.bands):
+        raise SheetError(_CONTRADICT)
+    return found
 
 
 def _report(sheet: BridgeFile, found: Fit) -> list[str]:
@@ -67,6 +96,8 @@ def _report(sheet: BridgeFile, found: Fit) -> list[str]:
     worst = sorted(found.residuals, key=lambda r: -abs(r.sigmas))[:3]
     lines += [f"residuals: {found.chi_square_per_residual:.2f} per residual in units of expected variance; largest:"]
     lines += [f"  step {r.step + 1:3} {sheet.steps[r.step].kind:8} {r.what:9} {r.sigmas:+.1f} sd" for r in worst]
+    if found.chi_square_per_residual > _CONTRADICTING:
+        lines += ["caution: the steps contradict each other beyond their noise: look for a slip in those above first"]
     lines += [f"note: {note}" for note in found.notes]
     return lines
 

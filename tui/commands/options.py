@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import re
 
 __all__ = ["add_reading_options", "add_source_options", "at_least_one", "positive"]
 
@@ -37,18 +38,23 @@ def add_reading_options(parser: argparse.ArgumentParser) -> None:
 
 
 def _rate(text: str) -> int:
-    value = int(text) if text.isdigit() else 0
+    value = _whole(text)
     if not 300 <= value <= 4_000_000:
-        raise argparse.ArgumentTypeError(f"{text!r} is no rate; wanted baud from 300 to 4000000, usually 115200")
+        raise argparse.ArgumentTypeError(f"{text[:40]!r} is no rate; wanted baud from 300 to 4000000, usually 115200")
     return value
 
 
 def at_least_one(text: str) -> int:
     """A whole number from 1 up, for argparse."""
-    value = int(text) if text.isdigit() else 0
+    value = _whole(text)
     if value < 1:
-        raise argparse.ArgumentTypeError(f"{text!r} is no number of readings; wanted a whole number from 1 up")
+        raise argparse.ArgumentTypeError(f"{text[:40]!r} is no number of readings; wanted a whole number from 1 up")
     return value
+
+
+def _whole(text: str) -> int:
+    """A whole number of up to nine digits, else 0."""
+    return int(text) if re.fullmatch("[0-9]{1,9}", text) else 0
 
 
 def positive(text: str) -> float:

@@ -22,16 +22,25 @@ def desk_for(args: argparse.Namespace, source: Source) -> Desk:
     from bridgeio.bridge_file import load_bridge_file
     from bridgeio.desk import Desk
     from bridgeio.simulator import BRIDGE_FILE
-    from calibration.units import frequency_hz
 
     paths = list(args.bridge) or ([BRIDGE_FILE] if source.simulated else [])
     return Desk(
         [load_bridge_file(path) for path in paths],
-        frequency_hz=None if args.frequency is None else frequency_hz(args.frequency),
+        frequency_hz=_frequency_hz(args.frequency),
         samples=getattr(args, "samples", 1),
         simulated=source.simulated,
         live=source.live,
     )
+
+
+def _frequency_hz(text: str | None) -> float | None:
+    from calibration.errors import UnitError
+    from calibration.units import frequency_hz
+
+    try:
+        return None if text is None else frequency_hz(text)
+    except UnitError as error:
+        raise UnitError(f"--frequency: {error}") from error
 
 
 def receiver_for(args: argparse.Namespace, source: Source) -> Receiver:
@@ -47,10 +56,10 @@ def receiver_for(args: argparse.Namespace, source: Source) -> Receiver:
 def damage_in_words(counters: Counters) -> str:
     """What was damaged or lost on the line, "" where nothing was."""
     parts = [
-        (counters.bad_crc, "frames with a bad checksum"),
-        (counters.malformed, "malformed frames"),
-        (counters.bad_lines, "lines that are none of the known forms"),
-        (counters.lost, "frames lost at least"),
-        (counters.newer, "frames of a newer bridge than this program knows"),
+        (counters.bad_crc, "frame", "with a bad checksum"),
+        (counters.malformed, "malformed frame", ""),
+        (counters.bad_lines, "line", "in none of the known forms"),
+        (counters.lost, "frame", "lost at least"),
+        (counters.newer, "frame", "of a newer bridge than this program knows"),
     ]
-    return ", ".join(f"{count} {what}" for count, what in parts if count)
+    return ", ".join(f"{n} {noun}{'s' if n > 1 else ''} {rest}".rstrip() for n, noun, rest in parts if n)

@@ -8,9 +8,12 @@ from __future__ import annotations
 import argparse
 import sys
 import time
+from contextlib import ExitStack
 from typing import IO, TYPE_CHECKING
 
+from bridgeio.errors import FileError
 from tui.commands.options import add_reading_options, add_source_options, at_least_one
+from tui.door import say, visible
 
 if TYPE_CHECKING:
     from bridgeio.desk import Desk, TimedReadings
@@ -40,41 +43,53 @@ def run(args: argparse.Namespace) -> int:
     from tui.commands.reading import desk_for, receiver_for
 
     source = open_source(args.source, args.baud)
-    receiver = receiver_for(args, source)
-    desk = desk_for(args, source)
-    printer = _Printer(args.format, args.count)
-    raw = _new_file(args.raw)
-    try:
+    receiver, desk = receiver_for(args, source), desk_for(args, source)
+    with ExitStack() as held:
+        held.callback(source.close)
         source.open()
-        while not printer.full:
-            data = source.read()
-            if raw is not None:
-                raw.write(data)
-            _print_all(data, receiver, desk, printer)
-    except EndOfSource:
-        pass
-    finally:
-        source.close()
-        if raw is not None:
-            raw.close()
-    _tell_end(receiver, desk, printer, source)
+        raw = _Raw(args.raw, held)
+        printer = _Printer(args.format, args.count)
+        try:
+            while not printer.full:
+                raw.keep(data := source.read())
+                _print_all(data, receiver, desk, printer)
+        except EndOfSource:
+            _tell_unfinished(raw.last, receiver)
+    _tell_end(receiver, printer, source)
     return 0
 
 
 def _print_all(data: bytes, receiver: Receiver, desk: Desk, printer: _Printer) -> None:
-    items = receiver.feed(data)
-    for batch in desk.take(items, time.time()):
+    arrival_s = time.time()
+    for batch in desk.take(receiver.feed(data), arrival_s):
         printer.print(batch, desk)
 
 
+class _Raw:
+    """Keeps the bytes as they come, in a new file where one is wanted; the last byte in any case."""
+
+    def __init__(self, path: str | None, held: ExitStack) -> None:
+        self._path, self._file, self.last = path, None if path is None else held.enter_context(_new_file(path)), b""
+
+    def keep(self, data: bytes) -> None:
+        """Write at once: whatever ends us, what came is kept. FileError where that cannot be."""
+        self.last = data[-1:] or self.last
+        if self._file is None:
+            return
+        try:
+            self._file.write(data)
+        except OSError as error:
+            raise FileError(f"{self._path}: cannot be written: {error.strerror}") from error
+
+
 class _Printer:
-    """Prints rows until `count` are out, and says once why readings are counts only."""
+    """Prints rows until `count` are out, and says once what speaks against them."""
 
     def __init__(self, form: str, count: int | None) -> None:
         from bridgeio.rows import FORMATS, csv_header
 
         self._rows, self._left, self.printed = FORMATS[form], count, 0
-        self._said: str | None = None
+        self._said: set[str] = set()
         if form == "csv":
             print(csv_header())
 
@@ -85,11 +100,10 @@ class _Printer:
 
     def print(self, batch: TimedReadings, desk: Desk) -> None:
         """Print a batch's rows, no more than are left, and flush: a reader follows live."""
-        from tui.door import say
-
-        if desk.note not in (None, self._said):
-            self._said = desk.note
-            say(f"bridgewright stream: {desk.note}")
+        for words in (desk.note, desk.caution):
+            if words and words not in self._said:
+                self._said.add(words)
+                _tell(words)
         rows = list(self._rows(batch, desk.bridge_name, 1))
         if self._left is not None:
             rows = rows[: self._left]
@@ -99,24 +113,32 @@ class _Printer:
         sys.stdout.flush()
 
 
-def _new_file(path: str | None) -> IO[bytes] | None:
-    from bridgeio.errors import FileError
-
-    if path is None:
-        return None
+def _new_file(path: str) -> IO[bytes]:
     try:
-        return open(path, "xb")
+        return open(path, "xb", buffering=0)
     except OSError as error:
         raise FileError(f"{path}: cannot be made: {error.strerror}; --raw wants the name of a new file") from error
 
 
-def _tell_end(receiver: Receiver, desk: Desk, printer: _Printer, source: Source) -> None:
+def _tell_unfinished(last: bytes, receiver: Receiver) -> None:
+    """Say that a last line without its end was left out: where it was cut off, its numbers would be false."""
+    counters = receiver.counters
+    lines = sum(counters.frames.values()) == counters.twins and (counters.lines or counters.bytes < 512)
+    if lines and last not in (b"", b"\n", b"\0"):
+        _tell("the last line has no line end and was left out, as it may be cut off")
+
+
+def _tell_end(receiver: Receiver, printer: _Printer, source: Source) -> None:
     """Say on standard error what a listener should know: nothing readable at all, or damage and losses."""
     from tui.commands.reading import damage_in_words
-    from tui.door import say
 
     words = damage_in_words(receiver.counters)
     if not printer.printed and not printer.full:
-        say(f"bridgewright stream: nothing readable came from {source.name}{f' ({words})' if words else ''}")
+        _tell(f"nothing readable came from {source.name}{f' ({words})' if words else ''}")
     elif words:
-        say(f"bridgewright stream: {words}")
+        _tell(words)
+
+
+def _tell(words: str) -> None:
+    """A line on standard error, whatever the words hold."""
+    say(visible(f"bridgewright stream: {words}"))
