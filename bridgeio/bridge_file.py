@@ -11,7 +11,7 @@ import re
 import shlex
 import tomllib
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -21,6 +21,7 @@ from calibration.bench import BenchRatings, BenchStep
 from calibration.bridge import Bridge
 from calibration.errors import UnitError
 from calibration.loads import load_impedance_ohm
+from calibration.warmth import DIODES, DiodeKind
 
 from .errors import FileError
 from .faults import fault_in_words, short
@@ -51,6 +52,7 @@ class BridgeFile:
     match_return_loss_db: float | None = None
     max_w: float | None = None
     reference_mv: int | None = None
+    diode: DiodeKind | None = None
     fit_id: int | None = None
 
     def calibrated(self) -> Bridge:
@@ -132,7 +134,7 @@ def _table_of(text: str, source: str) -> dict[str, Any]:
 
 def _validated(raw: dict[str, Any]) -> tuple[list[str], _FileModel | None]:
     """All faults of the table in words, and the model where pydantic finds none."""
-    of_steps = list(_step_faults(raw))
+    of_steps = [*_head_faults(raw), *_step_faults(raw)]
     try:
         return of_steps, _FileModel.model_validate(raw)
     except ValidationError as error:
@@ -244,6 +246,7 @@ class _FileModel(_Model):
             bench.reference_pct, bench.reference_full_scale_w, bench.dummy_return_loss_db, bench.resistor_pct
         )
         device_id = None if head.device_id is None else int(head.device_id, 16)
+        diode = _diode_of(head)
         return BridgeFile(
             source=source,
             name=head.name,
@@ -252,13 +255,31 @@ class _FileModel(_Model):
             detector=head.detector,
             ratings=ratings,
             steps=tuple(BenchStep(**step.model_dump()) for step in self.step),
-            bridge=table.bridge(head.name, head.full_scale, head.z0_ohm, device_id) if table else None,
+            bridge=table.bridge(head.name, head.full_scale, head.z0_ohm, device_id, diode) if table else None,
+            diode=diode,
             device_id=device_id,
             match_return_loss_db=head.match_return_loss_db,
             max_w=head.max_w,
             reference_mv=head.reference_mv,
             fit_id=table.id if table else None,
         )
+
+
+def _diode_of(head: _BridgeModel) -> DiodeKind | None:
+    """Temperature behaviour of the diode named, with what the builder knows better of it."""
+    if head.diode is None:
+        return None
+    told = {"eg_ev": head.eg_ev, "xti": head.xti, "n": head.n}
+    return replace(DIODES[head.diode], **{key: value for key, value in told.items() if value is not None})
+
+
+def _head_faults(raw: dict[str, Any]) -> Iterator[str]:
+    """What contradicts within [bridge]."""
+    head = raw.get("bridge")
+    if isinstance(head, dict) and "diode" not in head:
+        for key in ("eg_ev", "xti", "n"):
+            if key in head:
+                yield f"bridge.{key}: refines a diode that is not named; wanted diode = one of {', '.join(DIODES)} too"
 
 
 def _step_faults(raw: dict[str, Any]) -> Iterator[str]:

@@ -1,7 +1,6 @@
-"""The desk between the wire and the readings: which calibration may be used, at which frequency, at what time.
+"""The desk between the wire and the readings: by which calibration, at which frequency, temperature and time.
 
-One rule: no calibration is used for a board it was not made for. A board with another full scale or device id is read
-as counts only, and a sentence says why.
+One rule: the bridge's own word on itself goes before what the user said, and both only while they are fresh.
 """
 
 from __future__ import annotations
@@ -13,15 +12,16 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from calibration.meter import Meter, uncalibrated
+from calibration.meter import uncalibrated
 from calibration.readings import Readings
+from calibration.smoothing import Averager, Samples
 
 from .bridge_file import BridgeFile
 from .clock import DeviceClock
-from .errors import FileError
-from .frames import Conditions, Item, Nameplate, Tallies
+from .frames import FLAG_DROPPED, Conditions, Item, Nameplate, Tallies
+from .shelf import Calibration, Shelf
 
-__all__ = ["Desk", "TimedReadings"]
+__all__ = ["Desk", "Reading", "TimedReadings"]
 
 Array = npt.NDArray[np.float64]
 
@@ -29,14 +29,39 @@ Array = npt.NDArray[np.float64]
 _FRESH_S = 10.0
 #: Nameplates come every 2 s: a bridge that has talked this long without one sends none [ms].
 _NAMELESS_MS = 4500
+#: A temperature told by the bridge is believed for this long [s]: a box has a slow one.
+_SAME_WARMTH_S = 60.0
+_NO_TEMPERATURE = -32768
+#: Between two tallies so many frames of other kinds may stand; more missing numbers than that are a gap.
+_OTHER_FRAMES = 3
 
 
 @dataclass(frozen=True, slots=True)
 class TimedReadings:
-    """Readings of length n and when they were taken, `time_s` [s since 1970, n]; NaN where the source has no time."""
+    """Readings of length n and when they were taken, `time_s` [s since 1970, n]; NaN where the source has no time.
+
+    averaged: how many tallies each is made of, int[n].
+    """
 
     readings: Readings
     time_s: Array
+    averaged: npt.NDArray[np.intp]
+
+
+@dataclass(frozen=True, slots=True)
+class Reading:
+    """How counts are read: what the user chose.
+
+    frequency_hz: used where the bridge does not tell it [Hz]. samples: readings that each pair of counts is a mean
+    of. average: tallies to one reading. hard: bounds in place of 95 % intervals. live_dark: the running dark count is
+    the zero; else an interval allows for it where it has moved.
+    """
+
+    frequency_hz: float | None = None
+    samples: int = 1
+    average: int = 1
+    hard: bool = False
+    live_dark: bool = False
 
 
 class Desk:
@@ -45,27 +70,29 @@ class Desk:
     def __init__(
         self,
         files: Sequence[BridgeFile] = (),
+        how: Reading | None = None,
         *,
-        frequency_hz: float | None = None,
-        samples: int = 1,
         simulated: bool = False,
         live: bool = True,
         clock: Callable[[], float] = time.monotonic,
     ) -> None:
         """Read by `files` (matched to boards by device id). FileError where one has no fit, or two are for one board.
 
-        frequency_hz: used where the bridge does not tell it [Hz]. samples: readings that each pair of counts is a mean
-        of. live: arrivals are times; else the source has none.
+        live: arrivals are times; else the source has none.
         """
-        _demand_one_a_board(files)
-        self._meters = [(file, Meter(file.calibrated())) for file in files]
-        self.frequency_option_hz = frequency_hz
-        self._samples, self._simulated, self._live = samples, simulated, live
+        self._shelf = Shelf(files)
+        self._how = how or Reading()
+        self.frequency_option_hz = self._how.frequency_hz
+        self._simulated, self._live = simulated, live
         self._told_hz: tuple[float, float] | None = None
+        self._told_c: tuple[float, float] | None = None
         self._clock, self._device_clock, self._device_s = clock, DeviceClock(), 0.0
         self.nameplate: Nameplate | None = None
         self._checked, self._nameless = False, False
         self._since_ms: int | None = None
+        self._before: Readings | None = None
+        self._averager = Averager(self._how.average) if self._how.average > 1 else None
+        self._next_seq: int | None = None
 
     @property
     def frequency_hz(self) -> float | None:
@@ -75,11 +102,29 @@ class Desk:
         return self.frequency_option_hz
 
     @property
+    def temperature_c(self) -> float | None:
+        """The box's temperature [degrees Celsius] as the bridge told it within the last minute."""
+        if self._told_c is not None and abs(self._now_s() - self._told_c[1]) <= _SAME_WARMTH_S:
+            return self._told_c[0]
+        return None
+
+    @property
+    def dark(self) -> tuple[float, float] | None:
+        """The running dark counts where they have left the calibration's zero, else None."""
+        chosen, _ = self._choice(self._checked)
+        return None if chosen is None else chosen.dark.moved
+
+    @property
+    def waiting(self) -> int:
+        """Tallies that wait for more to make an average with."""
+        return 0 if self._averager is None else self._averager.waiting
+
+    @property
     def bridge_name(self) -> str | None:
         """Name of the calibration in force, else of the board, else None."""
-        meter, _ = self._choice(self._checked)
-        if meter is not None:
-            return meter.bridge.name
+        chosen, _ = self._choice(self._checked)
+        if chosen is not None:
+            return chosen.meter.bridge.name
         return self.nameplate.name if self.nameplate else None
 
     @property
@@ -90,22 +135,8 @@ class Desk:
     @property
     def caution(self) -> str | None:
         """What the board says against the calibration in force, in a sentence; None where it says nothing."""
-        plate = self.nameplate
-        meter, _ = self._choice(self._checked)
-        file = next((file for file, own in self._meters if own is meter), None)
-        if plate is None or file is None:
-            return None
-        if plate.bridge_file_id not in (0, file.fit_id):
-            return (
-                f"the board was given fit {plate.bridge_file_id:04X}, bridge file {file.source} holds fit "
-                f"{file.fit_id or 0:04X}: readings are by the file"
-            )
-        if file.reference_mv and plate.reference_mv not in (0, file.reference_mv):
-            return (
-                f"the bridge converts against {plate.reference_mv} mV, bridge file {file.source} was made with "
-                f"{file.reference_mv} mV: powers are off unless that is a slip in the file"
-            )
-        return None
+        chosen, _ = self._choice(self._checked)
+        return None if chosen is None else chosen.caution(self.nameplate)
 
     def take(self, items: Sequence[Item], arrival_s: float) -> Iterator[TimedReadings]:
         """Readings of the tallies among `items`, in order; the other items change what follows them.
@@ -115,13 +146,22 @@ class Desk:
         for item in items:
             if isinstance(item, Tallies):
                 self._listen(item)
-                yield TimedReadings(self._read(item), self._times(item, arrival_s))
+                batch = self._read(item, self._times(item, arrival_s))
+                if self._averager is None:
+                    yield batch
+                else:
+                    yield from self._averages(self._averager, item, batch)
             elif isinstance(item, Nameplate):
                 self._meet(item)
             elif isinstance(item, Conditions):
-                self._device_s = item.ms / 1000.0
-                if item.frequency_hz:
-                    self._told_hz = (float(item.frequency_hz), self._now_s())
+                self._hear(item)
+
+    def _hear(self, conditions: Conditions) -> None:
+        self._device_s = conditions.ms / 1000.0
+        if conditions.frequency_hz:
+            self._told_hz = (float(conditions.frequency_hz), self._now_s())
+        if conditions.temperature_c100 != _NO_TEMPERATURE:
+            self._told_c = (conditions.temperature_c100 / 100.0, self._now_s())
 
     def _now_s(self) -> float:
         """Our clock; where arrivals are no times, the bridge's."""
@@ -131,7 +171,7 @@ class Desk:
         before = self.nameplate
         if before is not None and (before.boot, before.device_id) != (nameplate.boot, nameplate.device_id):
             self._device_clock.restart()
-            self._told_hz = None
+            self._told_hz = self._told_c = self._before = self._next_seq = None
         self.nameplate = nameplate
 
     def _listen(self, tallies: Tallies) -> None:
@@ -145,19 +185,87 @@ class Desk:
                 self._since_ms = int(tallies.ms[0])
             self._nameless = self._nameless or last_ms - self._since_ms > _NAMELESS_MS
 
-    def _read(self, tallies: Tallies) -> Readings:
-        meter, _ = self._choice(tallies.checked)
-        if meter is None:
-            return uncalibrated(tallies.forward, tallies.reflected, checked=tallies.checked, simulated=self._simulated)
-        return meter.read(
-            tallies.forward,
-            tallies.reflected,
+    def _read(self, tallies: Tallies, time_s: Array) -> TimedReadings:
+        counts = tallies.forward, tallies.reflected
+        readings = self._of_counts(*counts, tallies.checked, self._how.samples, tallies.flags, self._before)
+        self._before = readings
+        chosen, _ = self._choice(tallies.checked)
+        if chosen is not None:
+            chosen.dark.push(*counts, self._now_s())
+        return TimedReadings(readings, time_s, np.ones(len(tallies), dtype=np.intp))
+
+    def _of_counts(
+        self,
+        forward: Array,
+        reflected: Array,
+        checked: bool,
+        samples: npt.ArrayLike,
+        wire_flags: npt.ArrayLike,
+        after: Readings | None = None,
+    ) -> Readings:
+        chosen, _ = self._choice(checked)
+        if chosen is None:
+            return uncalibrated(forward, reflected, checked=checked, simulated=self._simulated)
+        live = self._how.live_dark
+        return chosen.meter.read(
+            forward,
+            reflected,
             frequency_hz=self.frequency_hz,
-            samples=self._samples,
-            wire_flags=tallies.flags,
-            checked=tallies.checked,
+            samples=samples,
+            wire_flags=wire_flags,
+            temperature_c=self.temperature_c,
+            zero=chosen.dark.moved if live else None,
+            moved_zero=None if live else chosen.dark.moved,
+            after=after,
+            hard=self._how.hard,
+            checked=checked,
             simulated=self._simulated,
         )
+
+    def _averages(self, averager: Averager, tallies: Tallies, batch: TimedReadings) -> Iterator[TimedReadings]:
+        """Readings of the groups that these tallies close."""
+        readings = batch.readings
+        run = Samples(
+            forward=tallies.forward,
+            reflected=tallies.reflected,
+            wire_flags=tallies.flags,
+            time_s=batch.time_s,
+            carrier=~readings.has("no-carrier"),
+            clipped=readings.has("clipped"),
+            gap_before=self._gaps(tallies),
+            kind=readings.frequency_hz,
+        )
+        groups = averager.push(run)
+        if groups:
+            yield self._grouped(groups, tallies.checked)
+
+    def _grouped(self, groups: list[Samples], checked: bool) -> TimedReadings:
+        """One reading a group: its counts are means, its powers the means of its powers."""
+        sizes = np.array([len(group) for group in groups], dtype=np.intp)
+        means = np.array([(group.forward.mean(), group.reflected.mean()) for group in groups]).T
+        chosen, _ = self._choice(checked)
+        counts = means
+        if chosen is not None:
+            zero = chosen.dark.moved if self._how.live_dark else None
+            told = [
+                chosen.meter.mean_counts(g.forward, g.reflected, temperature_c=self.temperature_c, zero=zero)
+                for g in groups
+            ]
+            counts = np.array(told).T
+        flags = np.array([np.bitwise_or.reduce(group.wire_flags) for group in groups])
+        readings = self._of_counts(counts[0], counts[1], checked, sizes * self._how.samples, flags)
+        readings.forward_counts, readings.reflected_counts = means
+        return TimedReadings(readings, np.array([group.time_s[-1] for group in groups]), sizes)
+
+    def _gaps(self, tallies: Tallies) -> npt.NDArray[np.bool_]:
+        """Where frames are missing before a tally, by its sequence number; other kinds of frame take numbers too."""
+        if not tallies.has_ms:
+            return np.zeros(len(tallies), dtype=bool)
+        seq = tallies.seq.astype(np.int64)
+        before = np.concatenate([[seq[0] - 1 if self._next_seq is None else self._next_seq - 1], seq[:-1]])
+        self._next_seq = int(seq[-1]) + 1
+        skipped = (seq - before - 1) & 0xFF
+        return np.asarray((skipped > _OTHER_FRAMES) | (tallies.flags & FLAG_DROPPED != 0))
 
     def _times(self, tallies: Tallies, arrival_s: float) -> Array:
         if not self._live:
@@ -166,45 +274,5 @@ class Desk:
             return np.full(len(tallies), arrival_s)
         return self._device_clock.utc(tallies.ms, arrival_s)
 
-    def _choice(self, checked: bool) -> tuple[Meter | None, str | None]:
-        """The meter for the board as known now; else None and why."""
-        if not self._meters:
-            return None, "no bridge file: counts only (give one with --bridge, made by `bridgewright fit`)"
-        plate = self.nameplate
-        if plate is None:
-            return self._before_nameplate(checked)
-        fitting = [(file, meter) for file, meter in self._meters if file.device_id in (None, plate.device_id)]
-        if not fitting:
-            return None, self._strange_board(plate)
-        # A file made for this very board goes before one that names none.
-        file, meter = max(fitting, key=lambda pair: pair[0].device_id is not None)
-        if file.full_scale != plate.full_scale:
-            return None, (
-                f"counts only: full scale is {plate.full_scale} on the bridge and {file.full_scale} in bridge file "
-                f"{file.source}"
-            )
-        return meter, None
-
-    def _before_nameplate(self, checked: bool) -> tuple[Meter | None, str | None]:
-        """Plain lines never bring a nameplate, frames do within two seconds: until then no file is known to fit."""
-        free = [meter for file, meter in self._meters if file.device_id is None or not checked]
-        if (self._nameless or not checked) and len(free) == 1 and len(self._meters) == 1:
-            return free[0], None
-        if not checked:
-            return None, "plain lines do not say which of the bridge files is theirs: counts only (give one --bridge)"
-        return None, "waiting for the bridge's nameplate to know which bridge file is its own: counts only until then"
-
-    def _strange_board(self, plate: Nameplate) -> str:
-        board = f"board {plate.device_id:08X}" if plate.device_id else "a board that tells no device id"
-        made_for = ", ".join(f"{file.source} is for {file.device_id or 0:08X}" for file, _ in self._meters)
-        return f"counts only: {board} has no bridge file among those given ({made_for})"
-
-
-def _demand_one_a_board(files: Sequence[BridgeFile]) -> None:
-    """FileError where two files claim one board, or two name none."""
-    seen: dict[int | None, str] = {}
-    for file in files:
-        board = "name no device_id" if file.device_id is None else f"are for board {file.device_id:08X}"
-        if file.device_id in seen:
-            raise FileError(f"{seen[file.device_id]} and {file.source} both {board}; wanted one bridge file a board")
-        seen[file.device_id] = file.source
+    def _choice(self, checked: bool) -> tuple[Calibration | None, str | None]:
+        return self._shelf.choose(self.nameplate, checked, self._nameless)

@@ -24,6 +24,7 @@ from calibration import __version__
 from calibration.bridge import Band, Bridge
 from calibration.fit import Fit
 from calibration.laws import LAWS, Law
+from calibration.warmth import DiodeKind
 
 from .errors import FileError
 from .framing import crc16
@@ -42,6 +43,8 @@ _BAND_KEYS = (
     "angle_cosine",
 )
 _SIDES = ("forward", "reflected")
+#: The numbers of a fit that belong to no side and no band.
+_PLAIN_NUMBERS = ("reference_pct", "temperature_c", "temperature_span_c")
 #: The comment above the table; found again, and not doubled, when a file is fitted anew.
 _MARK = "# Written by `bridgewright fit`; not meant to be edited: id tells when a number has changed."
 _TABLE = re.compile(r"[ \t]*\[")
@@ -64,6 +67,8 @@ class FitTable:
             "program": f"bridgewright {__version__}",
             "reference_pct": bridge.reference_pct,
             "reference_scatter_pct": 100.0 * fit.reference_scatter,
+            "temperature_c": bridge.temperature_c,
+            "temperature_span_c": bridge.temperature_span_c,
             "forward": _side_of(bridge, "forward"),
             "reflected": _side_of(bridge, "reflected"),
             "band": [_band_of(band) for band in bridge.bands],
@@ -91,7 +96,9 @@ class FitTable:
             )
         return table
 
-    def bridge(self, name: str, full_scale: int, z0_ohm: float, device_id: int | None) -> Bridge:
+    def bridge(
+        self, name: str, full_scale: int, z0_ohm: float, device_id: int | None, diode: DiodeKind | None = None
+    ) -> Bridge:
         """The calibrated bridge. KeyError, TypeError or ValueError where the table is not whole: see `read`."""
         laws = {side: self._law(side) for side in _SIDES}
         return Bridge(
@@ -105,6 +112,9 @@ class FitTable:
             reflected_sd=float(self.content["reflected"]["sd"]),
             reference_pct=float(self.content["reference_pct"]),
             device_id=device_id,
+            diode=diode,
+            temperature_c=float(self.content["temperature_c"]),
+            temperature_span_c=float(self.content["temperature_span_c"]),
         )
 
     def _law(self, side: str) -> Law:
@@ -204,9 +214,8 @@ def _dumps(table: FitTable) -> str:
     """The table as TOML, written by hand for its layout: a line a band, a line a residual."""
     lines = [_MARK, "[fit]", f'id = "{table.id:04X}"']
     content = table.content
-    lines += [
-        f"{key} = {_value(content[key])}" for key in ("date", "program", "reference_pct", "reference_scatter_pct")
-    ]
+    plain = ("date", "program", *_PLAIN_NUMBERS, "reference_scatter_pct")
+    lines += [f"{key} = {_value(content[key])}" for key in plain]
     lines += ["notes = [", *(f"  {_value(note)}," for note in content["notes"]), "]"]
     lines += ["residual = ["]
     lines += [f"  {{ {', '.join(f'{k} = {_value(v)}' for k, v in row.items())} }}," for row in content["residual"]]
@@ -255,7 +264,7 @@ def _band_from(table: dict[str, Any]) -> Band:
 
 def _id_of(content: dict[str, Any]) -> int:
     """CRC-16 over the fitted numbers, one a line: keys sorted, shortest round-trip decimals; 0 becomes 1."""
-    numbers = {"reference_pct": content["reference_pct"]}
+    numbers = {key: content[key] for key in _PLAIN_NUMBERS}
     for side in _SIDES:
         for key, value in content[side].items():
             numbers |= _numbers_of(f"{side}.{key}", value)

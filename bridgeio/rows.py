@@ -27,10 +27,10 @@ def rfc3339(time_s: float) -> str | None:
     return f"{stamp:%Y-%m-%dT%H:%M:%S}.{stamp.microsecond // 1000:03d}Z"
 
 
-def json_rows(batch: TimedReadings, bridge: str | None, averaged: int = 1) -> Iterator[str]:
+def json_rows(batch: TimedReadings, bridge: str | None) -> Iterator[str]:
     """One JSON object a reading, without line ends."""
     names = list(COLUMNS)
-    for row in _rows(batch, bridge, averaged):
+    for row in _rows(batch, bridge):
         # All but plain ASCII becomes an escape, so that no name drives a terminal.
         yield json.dumps(dict(zip(names, row, strict=True)), allow_nan=False, ensure_ascii=True)
 
@@ -40,17 +40,17 @@ def csv_header() -> str:
     return ",".join(COLUMNS)
 
 
-def csv_rows(batch: TimedReadings, bridge: str | None, averaged: int = 1) -> Iterator[str]:
+def csv_rows(batch: TimedReadings, bridge: str | None) -> Iterator[str]:
     """One line a reading, without line ends: RFC 4180 quoting, empty for unknown, flags parted by a space.
 
     What cannot be printed is written as an escape, so that a line stays a line and drives no terminal.
     """
-    for row in _rows(batch, bridge, averaged):
+    for row in _rows(batch, bridge):
         yield ",".join(_cell(value) for value in row)
 
 
-def _rows(batch: TimedReadings, bridge: str | None, averaged: int) -> Iterator[tuple[Any, ...]]:
-    columns = [column(batch, bridge, averaged) for column in COLUMNS.values()]
+def _rows(batch: TimedReadings, bridge: str | None) -> Iterator[tuple[Any, ...]]:
+    columns = [column(batch, bridge) for column in COLUMNS.values()]
     return zip(*columns, strict=True)
 
 
@@ -69,23 +69,19 @@ def _cell(value: Any) -> str:
 _FORMULA = ("=", "+", "-", "@", "\uff1d", "\uff0b", "\uff0d", "\uff20")
 
 
-Column = Callable[[TimedReadings, str | None, int], list[Any]]
+Column = Callable[[TimedReadings, str | None], list[Any]]
 
 
 def _of(name: str) -> Column:
-    def column(batch: TimedReadings, _bridge: str | None, _averaged: int) -> list[Any]:
+    def column(batch: TimedReadings, _bridge: str | None) -> list[Any]:
         return [value if math.isfinite(value) else None for value in getattr(batch.readings, name).tolist()]
 
     return column
 
 
-def _same(what: Callable[[str | None, int], Any]) -> Column:
-    return lambda batch, bridge, averaged: [what(bridge, averaged)] * len(batch.readings)
-
-
 #: column -> how it is taken, in the order of output.
 COLUMNS: dict[str, Column] = {
-    "time": lambda batch, _bridge, _averaged: [rfc3339(float(value)) for value in batch.time_s],
+    "time": lambda batch, _bridge: [rfc3339(float(value)) for value in batch.time_s],
     **{
         name: _of(name)
         for name in (
@@ -94,10 +90,10 @@ COLUMNS: dict[str, Column] = {
             *("return_loss_db", "forward_counts", "reflected_counts", "frequency_hz"),
         )
     },
-    "averaged": _same(lambda _bridge, averaged: averaged),
-    "bridge": _same(lambda bridge, _averaged: bridge),
-    "flags": lambda batch, _bridge, _averaged: [list(flag.names(bits)) for bits in batch.readings.flags],
+    "averaged": lambda batch, _bridge: batch.averaged.tolist(),
+    "bridge": lambda batch, bridge: [bridge] * len(batch.readings),
+    "flags": lambda batch, _bridge: [list(flag.names(bits)) for bits in batch.readings.flags],
 }
 
 #: format -> rows of it.
-FORMATS: dict[str, Callable[[TimedReadings, str | None, int], Iterator[str]]] = {"jsonl": json_rows, "csv": csv_rows}
+FORMATS: dict[str, Callable[[TimedReadings, str | None], Iterator[str]]] = {"jsonl": json_rows, "csv": csv_rows}

@@ -34,6 +34,8 @@ CENTRAL = 0.95
 NORMAL_DEVIATE = 1.959963984540054
 #: cos(0.025 pi): the central 95 % of a cosine of uniform angle end here, close to its likeliest values, the ends.
 _COSINE_DEVIATE = float(np.cos(0.025 * np.pi))
+#: Newton's method for an end of an interval: most steps, and the step in rho after which it stops.
+_MOST_STEPS, _FINE = 8, 1e-9
 
 
 def hard_bound(m: npt.ArrayLike, d: npt.ArrayLike, c: npt.ArrayLike) -> tuple[Array, Array]:
@@ -89,9 +91,9 @@ def rho_interval(
     """
     low_m, high_m, s, d, c, psi = np.broadcast_arrays(ratio_low, ratio_high, noise, d, c, angle_cosine)
     low = _lower_end(np.asarray(low_m, dtype=float), s, d, c, psi)
-    high = _upper_end(np.asarray(high_m, dtype=float), s, d, c, psi)
     # |d| is a limit and the truth may leak less: where little is measured less leakage allows a larger rho.
-    return low, np.maximum(high, _upper_end(np.asarray(high_m, dtype=float), s, 0.0 * d, c, psi))
+    high = _upper_end(np.asarray(high_m, dtype=float), s, np.stack([d, 0.0 * d]), c, psi)
+    return low, np.asarray(high.max(axis=0))
 
 
 def _swing(m2: Array, d: Array, c: Array, psi: Array) -> Array:
@@ -106,10 +108,12 @@ def _lower_end(m2: Array, s: Array, d: Array, c: Array, psi: Array) -> Array:
     possible = excess > NORMAL_DEVIATE * s
     with np.errstate(invalid="ignore", divide="ignore"):
         rho = np.where(possible, np.sqrt(np.maximum(excess / np.maximum(a, 1e-12), 0.0)), 0.0)
-        for _ in range(8):
+        for _ in range(_MOST_STEPS):
             quantile, slope = spread_quantile(2.0 * rho * e, s)
             gap = excess - rho * rho * a - quantile
-            rho = np.maximum(rho + gap / (2.0 * rho * a + 2.0 * e * slope), 0.0)
+            before, rho = rho, np.maximum(rho + gap / (2.0 * rho * a + 2.0 * e * slope), 0.0)
+            if _settled(before, rho, possible):
+                break
     return np.where(np.isnan(m2), np.nan, np.where(possible, rho, 0.0))
 
 
@@ -122,12 +126,20 @@ def _upper_end(m2: Array, s: Array, d: Array, c: Array, psi: Array) -> Array:
     a = np.maximum(a, 1e-12)
     start = (e + np.sqrt(np.maximum(e * e + a * (excess + NORMAL_DEVIATE * s), 0.0))) / a
     rho = start
-    for _ in range(8):
+    for _ in range(_MOST_STEPS):
         quantile, slope = spread_quantile(2.0 * rho * e, s)
         gap = excess - rho * rho * a + quantile
         fall = 2.0 * rho * a - 2.0 * e * slope
-        rho = np.clip(rho + np.where(fall > 0.0, gap / np.where(fall > 0.0, fall, 1.0), 0.0), 0.0, start)
+        step = np.where(fall > 0.0, gap / np.where(fall > 0.0, fall, 1.0), 0.0)
+        before, rho = rho, np.minimum(np.maximum(rho + step, 0.0), start)
+        if _settled(before, rho, bounded):
+            break
     return np.where(np.isnan(m2), np.nan, np.where(bounded, rho, np.inf))
+
+
+def _settled(before: Array, after: Array, wanted: npt.NDArray[np.bool_]) -> bool:
+    """Whether Newton's last step moved no wanted rho by more than what nobody can see; steps shrink as squares."""
+    return not np.any((np.abs(after - before) > _FINE) & wanted)
 
 
 def spread_quantile(swing: npt.ArrayLike, noise: npt.ArrayLike) -> tuple[Array, Array]:
@@ -138,16 +150,16 @@ def spread_quantile(swing: npt.ArrayLike, noise: npt.ArrayLike) -> tuple[Array, 
     a, s = np.asarray(swing, dtype=float), np.asarray(noise, dtype=float)
     total = a + s
     part = s / np.where(total > 0.0, total, 1.0)
-    knots, values = _quantile_table()
+    knots, values, slopes = _quantile_table()
     h = np.interp(part, knots, values)
-    dh = np.interp(part, knots, np.gradient(values, knots))
+    dh = np.interp(part, knots, slopes)
     # q = total h(part), d part/d swing = -part/total.
     return np.asarray(total * h), np.asarray(h - part * dh)
 
 
 @lru_cache(maxsize=1)
-def _quantile_table() -> tuple[Array, Array]:
-    """Quantile of (1 - p) cos + p normal at knots p in 0..1, by secant on the mean of the normal's tail."""
+def _quantile_table() -> tuple[Array, Array, Array]:
+    """Knots p in 0..1, quantile of (1 - p) cos + p normal there, by bisection of the normal's mean tail, and slope."""
     knots = np.linspace(0.0, 1.0, 129) ** 2
     cosines = np.cos((np.arange(2048) + 0.5) * np.pi / 2048.0)
     z, tail = _normal_tail()
@@ -161,7 +173,8 @@ def _quantile_table() -> tuple[Array, Array]:
         middle = (low + high) / 2.0
         above = excess(middle) > 0.0
         low, high = np.where(above, middle, low), np.where(above, high, middle)
-    return knots, np.concatenate([[_COSINE_DEVIATE], (low + high) / 2.0])
+    values = np.concatenate([[_COSINE_DEVIATE], (low + high) / 2.0])
+    return knots, values, np.gradient(values, knots)
 
 
 def _normal_tail() -> tuple[Array, Array]:

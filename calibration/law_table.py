@@ -5,6 +5,8 @@ One rule: between codes the table is a straight line, and outside the codes it s
 
 from __future__ import annotations
 
+from functools import cached_property
+
 import numpy as np
 import numpy.typing as npt
 
@@ -16,6 +18,8 @@ Array = npt.NDArray[np.float64]
 
 #: Up to this full scale every code has its knot; beyond, the knots are even in the square root.
 _MOST_CODES = 65535
+#: Sensitivities change little from code to code: about this many knots will do for them.
+_SENSITIVITY_KNOTS = 4096
 
 
 class LawTable:
@@ -26,11 +30,10 @@ class LawTable:
         self._law = law
         self._even_root = full_scale > _MOST_CODES
         count = min(full_scale, _MOST_CODES) + 1
-        self._knots = np.linspace(0.0, np.sqrt(full_scale) if self._even_root else full_scale, count)
-        if self._even_root:
-            self._knots = self._knots**2
         self._root_step = np.sqrt(full_scale) / (count - 1)
+        self._knots = self._counts_at(np.arange(count))
         self._square = law.square(self._knots)
+        self._stride = -(-count // _SENSITIVITY_KNOTS)
 
     def square(self, counts: Array) -> Array:
         """The law's square [law units] at `counts`, any shape; NaN in gives NaN out."""
@@ -46,7 +49,20 @@ class LawTable:
 
     def sensitivity(self, counts: Array) -> Array:
         """d square/d law parameters at `counts`, shape (*counts, p)."""
-        return self._law.sensitivity(np.clip(counts, 0.0, self._knots[-1]))
+        place, part = self._place(counts)
+        at, beyond = np.divmod(place, self._stride)
+        left = self._sensitivity.take(at, axis=0)
+        part = (part + beyond) / self._stride
+        return np.asarray(left + part[..., None] * (self._sensitivity.take(at + 1, axis=0) - left))
+
+    @cached_property
+    def _sensitivity(self) -> Array:
+        """The law's sensitivity at every stride-th knot, [knots, p]; the last knot may lie just beyond the codes."""
+        return self._law.sensitivity(self._counts_at(np.arange(0, len(self._knots) + self._stride, self._stride)))
+
+    def _counts_at(self, place: npt.NDArray[np.intp]) -> Array:
+        """Counts of the knots at `place`."""
+        return np.square(place * self._root_step) if self._even_root else place.astype(np.float64)
 
     def _place(self, counts: Array) -> tuple[npt.NDArray[np.intp], Array]:
         n = np.clip(counts, 0.0, self._knots[-1])

@@ -89,6 +89,12 @@ class Look:
         self._forward_places = [0, *range(2, 2 + sizes[0])]
         self._reflected_places = [1, *range(2 + sizes[0], 2 + sum(sizes))]
 
+    def mean_counts(self, forward: Array, reflected: Array) -> tuple[float, float]:
+        """The counts whose powers are the mean powers of n pairs."""
+        sides = zip(self._laws, self._tables, (forward, reflected), strict=True)
+        first, second = (float(law.counts(table.square(counts).mean())) for law, table, counts in sides)
+        return first, second
+
     def take(
         self, nf: Array, nr: Array, bands: BandTerms, place: Places, samples: Array, wire: npt.NDArray[np.int_]
     ) -> Taken:

@@ -98,6 +98,12 @@ class Meter:
         terms = Terms.joined([look.terms for look in looks])
         return Readings(columns, bits | _bits("over-unity", shown > 1.0), terms, beyond_open=beyond, hard=hard)
 
+    def mean_counts(
+        self, forward: Array, reflected: Array, *, temperature_c: float | None = None, zero: Zero | None = None
+    ) -> tuple[float, float]:
+        """The counts whose powers are the mean powers of n pairs: each sample is linearised, then averaged."""
+        return self._at_temperature(temperature_c, zero)[0].mean_counts(forward, reflected)
+
     def _bands(self, f: Array, one: bool) -> tuple[tuple[Band, ...], npt.NDArray[np.intp], Bits]:
         """Bands in use, the place in them of each reading [k, n] (-1: none), and what that says as flags."""
         calibrated = self.bridge.bands

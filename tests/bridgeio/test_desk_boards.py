@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from bridgeio.bridge_file import parse_bridge_file
-from bridgeio.desk import Desk
+from bridgeio.desk import Desk, Reading
 from bridgeio.errors import FileError
 from bridgeio.frames import Conditions, Nameplate, Remark, Tallies
 from tests import fitted
@@ -56,7 +56,7 @@ def test_files_are_matched_by_device_id():
     """Of two files the one made for the board is used, whichever comes first, and another board gets the other."""
     for order in (1, -1):
         files = [bridge_file("a.toml", A, "bridge a"), bridge_file("b.toml", B, "bridge b")][::order]
-        desk = Desk(files, frequency_hz=14.2e6)
+        desk = Desk(files, Reading(frequency_hz=14.2e6))
         assert not read(desk, nameplate(A), tallies()).has("uncalibrated").any()
         assert desk.bridge_name == "bridge a"
         assert not read(desk, nameplate(B), tallies()).has("uncalibrated").any()
@@ -65,7 +65,9 @@ def test_files_are_matched_by_device_id():
 
 def test_file_for_the_board_goes_before_one_for_any():
     """A file that names no board serves the others only."""
-    desk = Desk([bridge_file("any.toml", None, "any"), bridge_file("a.toml", A, "bridge a")], frequency_hz=14.2e6)
+    desk = Desk(
+        [bridge_file("any.toml", None, "any"), bridge_file("a.toml", A, "bridge a")], Reading(frequency_hz=14.2e6)
+    )
     read(desk, nameplate(A), tallies())
     assert desk.bridge_name == "bridge a"
     read(desk, nameplate(B), tallies())
@@ -74,7 +76,7 @@ def test_file_for_the_board_goes_before_one_for_any():
 
 def test_strange_board_is_counts_only_and_named():
     """A board that no file is for keeps its own name, no watts, and the sentence names both sides."""
-    desk = Desk([bridge_file("a.toml", A)], frequency_hz=14.2e6)
+    desk = Desk([bridge_file("a.toml", A)], Reading(frequency_hz=14.2e6))
     readings = read(desk, nameplate(B), tallies())
     assert readings.has("uncalibrated").all()
     assert np.isnan(readings.forward_w).all()
@@ -102,7 +104,7 @@ def test_two_files_for_one_board_are_refused(device_id, words):
 
 def test_plain_lines_with_several_files_are_counts_only():
     """Lines do not say whose they are: with two files neither is guessed."""
-    desk = Desk([bridge_file("a.toml", A), bridge_file("b.toml", B)], frequency_hz=14.2e6)
+    desk = Desk([bridge_file("a.toml", A), bridge_file("b.toml", B)], Reading(frequency_hz=14.2e6))
     readings = read(desk, tallies(checked=False, has_ms=False))
     assert readings.has("uncalibrated").all()
     assert readings.has("unchecked").all()
@@ -126,7 +128,7 @@ def test_sheet_is_no_bridge_file():
 def test_board_with_another_fit_is_told():
     """A board that carries the id of another fit, or converts against another reference, is read with a caution."""
     file = bridge_file(reference_mv=2500)
-    desk = Desk([file], frequency_hz=14.2e6)
+    desk = Desk([file], Reading(frequency_hz=14.2e6))
     read(desk, nameplate(fit_id=file.fit_id, reference_mv=2500), tallies())
     assert desk.caution is None
     read(desk, nameplate(fit_id=file.fit_id ^ 1), tallies())
@@ -142,7 +144,7 @@ def test_board_with_another_fit_is_told():
 def test_bridges_word_beats_the_option_while_fresh():
     """A frequency told by the bridge holds for 10 s of our clock, then the option does."""
     clock = Clock()
-    desk = Desk([bridge_file()], frequency_hz=14.2e6, clock=clock)
+    desk = Desk([bridge_file()], Reading(frequency_hz=14.2e6), clock=clock)
     desk_reads = lambda *items: read(desk, *items).frequency_hz[0]  # noqa: E731
     assert desk_reads(nameplate(), tallies()) == 14.2e6
     assert desk_reads(conditions(7_100_000), tallies()) == 7.1e6
@@ -154,14 +156,14 @@ def test_bridges_word_beats_the_option_while_fresh():
 
 def test_bridge_that_does_not_know_its_frequency_says_nothing():
     """Conditions with frequency 0 change nothing."""
-    desk = Desk([bridge_file()], frequency_hz=14.2e6, clock=Clock())
+    desk = Desk([bridge_file()], Reading(frequency_hz=14.2e6), clock=Clock())
     assert read(desk, nameplate(), conditions(0), tallies()).frequency_hz == 14.2e6
     assert read(desk, conditions(7_100_000), conditions(0), tallies()).frequency_hz == 7.1e6
 
 
 def test_frequency_of_a_recording_is_fresh_by_the_bridges_clock():
     """In a file, where our clock says nothing, the bridge's own milliseconds decide."""
-    desk = Desk([bridge_file()], frequency_hz=14.2e6, live=False, clock=Clock())
+    desk = Desk([bridge_file()], Reading(frequency_hz=14.2e6), live=False, clock=Clock())
     assert read(desk, nameplate(), conditions(7_100_000, ms=1000), tallies([11_000])).frequency_hz == 7.1e6
     assert read(desk, tallies([11_100])).frequency_hz == 14.2e6
 
@@ -175,7 +177,7 @@ def test_frequency_not_known_reads_over_all_bands():
 
 def test_other_board_has_another_transmitter():
     """What the last board said of its frequency is not believed of the next one."""
-    desk = Desk([bridge_file()], frequency_hz=14.2e6, clock=Clock())
+    desk = Desk([bridge_file()], Reading(frequency_hz=14.2e6), clock=Clock())
     read(desk, nameplate(A), conditions(7_100_000), tallies())
     assert read(desk, nameplate(B), tallies()).frequency_hz == 14.2e6
 
@@ -215,7 +217,7 @@ def test_board_that_starts_again_starts_a_new_time():
 
 def test_batches_are_given_one_at_a_time():
     """Between two batches the desk's word holds for the one just given: before and after a nameplate."""
-    desk = Desk([bridge_file()], frequency_hz=14.2e6)
+    desk = Desk([bridge_file()], Reading(frequency_hz=14.2e6))
     said = [desk.note is None for _ in desk.take([tallies(), nameplate(), tallies()], 0.0)]
     assert said == [False, True]
 

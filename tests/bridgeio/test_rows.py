@@ -21,10 +21,10 @@ KEYS = [
 ]  # fmt: skip
 
 
-def batch(forward, reflected, time_s=np.nan, **options):
+def batch(forward, reflected, time_s=np.nan, averaged=1, **options):
     """Readings of the shed bridge at 14.2 MHz."""
     readings = Meter(shed.fitted(12).bridge).read(forward, reflected, frequency_hz=14.2e6, **options)
-    return TimedReadings(readings, np.full(len(readings), time_s))
+    return TimedReadings(readings, np.full(len(readings), time_s), np.full(len(readings), averaged))
 
 
 def every_kind():
@@ -34,7 +34,7 @@ def every_kind():
 
 def test_json_has_the_documented_keys_in_order():
     """A row is one object with exactly these keys, in this order, in one line."""
-    (row,) = json_rows(batch(1100.0, 300.0, 1.5), "shed", 3)
+    (row,) = json_rows(batch(1100.0, 300.0, 1.5, averaged=3), "shed")
     assert list(json.loads(row)) == KEYS == list(COLUMNS)
     assert "\n" not in row
     found = json.loads(row)
@@ -82,7 +82,7 @@ def test_any_numbers_give_rows(forward, reflected):
     readings = uncalibrated(forward, reflected[:n])
     readings.rho = np.array(reflected[:n])
     readings.forward_w = np.array(forward)
-    for row in json_rows(TimedReadings(readings, np.full(n, np.inf)), "x"):
+    for row in json_rows(TimedReadings(readings, np.full(n, np.inf), np.ones(n, dtype=int)), "x"):
         assert list(json.loads(row, parse_constant=pytest.fail)) == KEYS
 
 

@@ -74,6 +74,7 @@ def _fitted(sheet: BridgeFile) -> Fit:
                 ratings=sheet.ratings,
                 match_return_loss_db=sheet.match_return_loss_db,
                 device_id=sheet.device_id,
+                diode=sheet.diode,
             )
     except CalibrationError:
         raise

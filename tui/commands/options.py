@@ -35,6 +35,13 @@ def add_reading_options(parser: argparse.ArgumentParser) -> None:
         help="bridge file with a fit; may be repeated, files are matched to boards by device_id",
     )
     parser.add_argument("--frequency", metavar="F", help="14.1M, 14100k, hertz, or a band such as 20m")
+    parser.add_argument("--hard", action="store_true", help="bounds that nothing can exceed, not 95 %% intervals")
+    parser.add_argument(
+        "--dark",
+        choices=("file", "live"),
+        default="file",
+        help="zero: the bridge file's (default; intervals allow for a dark count that has moved), or the running one",
+    )
 
 
 def _rate(text: str) -> int:

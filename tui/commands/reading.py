@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from bridgeio.account import Counters
+    from bridgeio.bridge_file import BridgeFile
     from bridgeio.desk import Desk
     from bridgeio.ports import Source
     from bridgeio.receiver import Receiver
@@ -20,25 +21,35 @@ def desk_for(args: argparse.Namespace, source: Source) -> Desk:
     FileError for a wrong bridge file, UnitError for a wrong frequency.
     """
     from bridgeio.bridge_file import load_bridge_file
-    from bridgeio.desk import Desk
+    from bridgeio.desk import Desk, Reading
     from bridgeio.simulator import BRIDGE_FILE
 
     paths = list(args.bridge) or ([BRIDGE_FILE] if source.simulated else [])
-    return Desk(
-        [load_bridge_file(path) for path in paths],
-        frequency_hz=_frequency_hz(args.frequency),
+    files = [load_bridge_file(path) for path in paths]
+    how = Reading(
+        frequency_hz=_frequency_hz(args.frequency, files),
         samples=getattr(args, "samples", 1),
-        simulated=source.simulated,
-        live=source.live,
+        average=getattr(args, "average", 1),
+        hard=args.hard,
+        live_dark=args.dark == "live",
     )
+    return Desk(files, how, simulated=source.simulated, live=source.live)
 
 
-def _frequency_hz(text: str | None) -> float | None:
+def _frequency_hz(text: str | None, files: list[BridgeFile]) -> float | None:
+    """The frequency meant; a band's name means the calibrated frequency within that band, else its middle."""
     from calibration.errors import UnitError
-    from calibration.units import frequency_hz
+    from calibration.units import BANDS, frequency_hz
 
+    if text is None:
+        return None
+    low, high = BANDS.get(text.strip(), (0.0, 0.0))
+    for file in files:
+        for band in file.calibrated().bands:
+            if low <= band.frequency_hz <= high:
+                return band.frequency_hz
     try:
-        return None if text is None else frequency_hz(text)
+        return frequency_hz(text)
     except UnitError as error:
         raise UnitError(f"--frequency: {error}") from error
 

@@ -34,6 +34,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--samples", type=at_least_one, default=1, metavar="N", help="each pair of counts is a mean of N readings (1)"
     )
+    parser.add_argument(
+        "--average", type=at_least_one, default=1, metavar="N", help="one reading from N tallies, powers averaged (1)"
+    )
     parser.add_argument("--raw", metavar="FILE", help="also keep the bytes as they come, in a new file")
 
 
@@ -55,6 +58,8 @@ def run(args: argparse.Namespace) -> int:
                 _print_all(data, receiver, desk, printer)
         except EndOfSource:
             _tell_unfinished(raw.last, receiver)
+            if desk.waiting:
+                _tell(f"the last {desk.waiting} tallies make no average of {args.average} and were left out")
     _tell_end(receiver, printer, source)
     return 0
 
@@ -104,7 +109,7 @@ class _Printer:
             if words and words not in self._said:
                 self._said.add(words)
                 _tell(words)
-        rows = list(self._rows(batch, desk.bridge_name, 1))
+        rows = list(self._rows(batch, desk.bridge_name))
         if self._left is not None:
             rows = rows[: self._left]
             self._left -= len(rows)
