@@ -26,6 +26,8 @@ __all__ = ["Fit", "StepResidual", "fit"]
 
 Array = npt.NDArray[np.float64]
 
+#: A bench that determines its parameters settles in some tens of steps; one that does not would wander for ever.
+_MOST_STEPS = 400
 #: A wattmeter repeats no better than this from step to step [relative sd of power]; nor, unknown, worse.
 _SCATTER_FLOOR = 0.002
 _SCATTER_START = 0.01
@@ -151,7 +153,9 @@ def _solve(model: BenchModel) -> tuple[Array, Array]:
 def _descend(model: BenchModel, start: Array) -> tuple[Array, float]:
     from scipy.optimize import least_squares
 
-    found = least_squares(model.residuals, start, jac=_jacobian(model.residuals), method="lm", x_scale="jac")
+    found = least_squares(
+        model.residuals, start, jac=_jacobian(model.residuals), method="lm", x_scale="jac", max_nfev=_MOST_STEPS
+    )
     return found.x, float(found.cost)
 
 
