@@ -75,7 +75,7 @@ PICTURES = {
  f frequency   b forget best   a alarm limits   d dark/light   ? help   q quit""",
     (40, 20): """\
  14.100 MHz 20 m        key down 0/10 s
- simulated
+ simulated; garden shed bridge
                 _
  SWR   |   |_|  _|       1.35-1.50
        | .   | |_

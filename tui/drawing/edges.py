@@ -26,7 +26,7 @@ _FINEST = 1.01e-3  # of SWR at the best point: finer is noise to the eye
 
 
 def draw_status(snapshot: Snapshot, key: KeyState, limits: Limits, width: int, glyphs: Glyphs) -> Row:
-    """Bridge, frequency and band, link, key-down clock. A narrow screen leaves the bridge's name out."""
+    """Bridge, frequency and band, link, key-down clock. A narrow screen has the bridge's name among the remarks."""
     line = Line(width)
     clock, role = _key_text(key, limits)
     line.put_right(width, clock, role)
@@ -54,7 +54,7 @@ def link_words(snapshot: Snapshot, glyphs: Glyphs) -> Piece:
 
 
 def draw_remarks(readout: Readout, snapshot: Snapshot, width: int, glyphs: Glyphs) -> Row:
-    """Flags in words and the note; on a narrow screen the link's trouble first, as the status line has no room."""
+    """Flags in words and the note; a narrow screen, without room in the status line, has trouble first, name last."""
     parts: list[Piece] = []
     if width < _NARROW:
         words, role = link_words(snapshot, glyphs)
@@ -63,6 +63,9 @@ def draw_remarks(readout: Readout, snapshot: Snapshot, width: int, glyphs: Glyph
     parts += [(words, "label" if words == FLAG_WORDS["simulated"] else "word") for words in readout.remarks]
     if snapshot.note:
         parts.append((outside(snapshot.note, not glyphs.dots), "word"))
+    name = snapshot.bridge or snapshot.nameplate
+    if width < _NARROW and name:
+        parts.append((outside(name, not glyphs.dots), "label"))
     text = "; ".join(words for words, _ in parts)
     return Line(width).put(0, fit(text, width), parts[0][1] if parts else "").row()
 

@@ -84,7 +84,8 @@ def _words(readout: Readout, width: int, at: int, cells: int) -> Row:
     line = Line(width)
     if width < _NARROW:
         line.put(0, f"{watts(readout.forward, readout.stale)}", role)
-        text = f"net {readout.net.text}  back {readout.reflected.text}" if readout.net.text else ""
+        was = "was " if readout.stale else ""
+        text = f"net {was}{readout.net.text}  back {was}{readout.reflected.text}" if readout.net.text else ""
         return line.put_right(width, text, role).row()
     if not readout.forward.text:
         bound = readout.forward.interval and f"{readout.forward.interval} W"
