@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -113,6 +113,10 @@ class Desk:
         """The running dark counts where they have left the calibration's zero, else None."""
         chosen, _ = self._choice(self._checked)
         return None if chosen is None else chosen.dark.moved
+
+    def use_live_dark(self, live: bool) -> None:
+        """Read with the running dark count as zero from now on, or with the calibration's."""
+        self._how = replace(self._how, live_dark=live)
 
     @property
     def waiting(self) -> int:

@@ -69,6 +69,7 @@ class BridgewrightApp(App[None]):
         color: bool = True,
         limits: Limits | None = None,
         rate_hz: float = 20.0,
+        live_dark: bool = False,
         clock: Callable[[], float] = time.monotonic,
     ) -> None:
         """`rate_hz` [Hz] is the rate at which the feed sends readings; `clock` [s] must be steady."""
@@ -88,6 +89,7 @@ class BridgewrightApp(App[None]):
         self._stopped = False
         self._failure: Exception | None = None
         self._watching = False
+        self._live_dark = live_dark
         self.use_command_palette = not ascii  # it draws pictures
 
     def get_default_screen(self) -> LiveScreen:
@@ -130,6 +132,11 @@ class BridgewrightApp(App[None]):
     def set_frequency(self, hz: float) -> None:
         """Read at this frequency [Hz] from now on."""
         self._feed.set_frequency(hz)
+
+    def toggle_zero(self) -> None:
+        """Read with the running dark count as zero, or with the calibration's again."""
+        self._live_dark = not self._live_dark
+        self._feed.use_live_dark(self._live_dark)
 
     def set_limits(self, limits: Limits) -> None:
         """Use other limits from now on."""

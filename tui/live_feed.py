@@ -60,6 +60,11 @@ class LiveFeed:
             self._desk.frequency_option_hz = hz
             self._send()
 
+    def use_live_dark(self, live: bool) -> None:
+        """Read with the running dark count as zero from now on, or with the calibration's."""
+        if self._desk is not None:
+            self._desk.use_live_dark(live)
+
     def _on_items(self, items: list[Item], arrival_s: float) -> None:
         assert self._desk is not None
         now_s = time.monotonic()

@@ -55,6 +55,9 @@ class Feed(Protocol):
     def set_frequency(self, hz: float) -> None:
         """Read at this frequency [Hz] from now on."""
 
+    def use_live_dark(self, live: bool) -> None:
+        """Read with the running dark count as zero from now on, or with the calibration's."""
+
 
 @dataclass(frozen=True, slots=True)
 class View:

@@ -26,7 +26,7 @@ FLAG_WORDS: dict[str, str] = {
     "swapped": "forward and reflected look exchanged",
     "clipped": "clipped: a detector is at its end",
     "band-unknown": "frequency unknown: press f",
-    "dark-moved": "zero has moved",
+    "dark-moved": "zero has moved: z takes the new one",
     "unchecked": "unchecked lines",
     "interpolated": "between calibrated bands",
     "no-temperature": "box temperature unknown",

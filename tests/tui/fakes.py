@@ -90,6 +90,7 @@ class HandFeed:
     started_with: str | None = None
     stops: int = 0
     frequencies: list[float] = field(default_factory=list)
+    zeros: list[bool] = field(default_factory=list)
     look: Callable[[], str] = lambda: ""
     post: Callable[[Snapshot], None] | None = None
 
@@ -102,6 +103,9 @@ class HandFeed:
 
     def set_frequency(self, hz):
         self.frequencies.append(hz)
+
+    def use_live_dark(self, live):
+        self.zeros.append(live)
 
 
 def snapshot(reading=None, **more):

@@ -474,3 +474,17 @@ def test_all_flags_at_once_are_survived():
                 await shown(pilot, feed, "SWR", reading(spread.uniform(0, 1.3), *flags, half=spread.uniform(0, 0.5)))
 
     check(look())
+
+
+def test_z_takes_the_new_zero_and_gives_it_back():
+    """The remark offers the key; the first press asks the feed for the running dark count, the next for the old one."""
+
+    async def run():
+        async with running() as (_, feed, pilot):
+            await shown(pilot, feed, "zero has moved: z takes", reading(0.2, "dark-moved"))
+            await pilot.press("z")
+            await until(pilot, lambda: feed.zeros == [True])
+            await pilot.press("z")
+            await until(pilot, lambda: feed.zeros == [True, False])
+
+    check(run())

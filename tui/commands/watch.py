@@ -54,7 +54,12 @@ def run(args: argparse.Namespace) -> int:
     from tui.app import BridgewrightApp
 
     app = BridgewrightApp(
-        feed, ascii=shown_on.ascii, color=shown_on.color, limits=_limits(args), rate_hz=args.rate or _SCREEN_HZ
+        feed,
+        ascii=shown_on.ascii,
+        color=shown_on.color,
+        limits=_limits(args),
+        rate_hz=args.rate or _SCREEN_HZ,
+        live_dark=args.dark == "live",
     )
     app.run()
     return app.return_code or 0

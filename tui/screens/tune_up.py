@@ -30,11 +30,13 @@ if TYPE_CHECKING:
 
 __all__ = ["KEYS", "TuneUp", "limits_from"]
 
-#: Key, words, words for a narrow screen and action, in the order of the bottom line.
+#: Key, words, words for a narrow screen and action, in the order of the bottom line. Without words it is not shown
+#: there: `z` is offered by the remark that the zero has moved, and only then has anything to do.
 KEYS = (
     ("f", "frequency", "freq", "screen.ask_frequency"),
     ("b", "forget best", "best", "screen.forget_best"),
     ("a", "alarm limits", "limits", "screen.ask_limits"),
+    ("z", "", "", "screen.take_zero"),
     ("d", "dark/light", "", "app.toggle_dark"),
     ("?", "help", "help", "app.help"),
     ("q", "quit", "quit", "app.quit"),
@@ -111,6 +113,10 @@ class TuneUp(LiveScreen):
         if self._view is not None:
             self._view.trail.forget()
             self.redraw()
+
+    def action_take_zero(self) -> None:
+        """Take the running dark count as zero, or go back to the calibration's."""
+        cast("BridgewrightApp", self.app).toggle_zero()
 
     def _use_frequency(self, text: str) -> None:
         from calibration.units import frequency_hz  # numpy comes with it

@@ -39,7 +39,7 @@ class KeyBar(Rows):
 
 def draw_keys(keys: Sequence[Key], width: int) -> tuple[Row, list[tuple[int, int, str]]]:
     """The line, and for each key the cells it covers with its action. A narrow line has fewer and shorter words."""
-    texts = [(key, words, action) for key, words, _, action in keys]
+    texts = [(key, words, action) for key, words, _, action in keys if words]
     gap = 3
     if _length(texts, gap) > width:
         texts = [(key, brief, action) for key, _, brief, action in keys if brief]
