@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
@@ -22,7 +23,10 @@ from .leak_limits import band_of_fit, with_neighbours
 from .units import power_from_volts_w
 from .warmth import DiodeKind
 
-__all__ = ["Fit", "StepResidual", "fit"]
+__all__ = ["Fit", "Solution", "StepResidual", "fit", "scatter_of", "solve"]
+
+if TYPE_CHECKING:
+    from scipy.optimize import OptimizeResult
 
 Array = npt.NDArray[np.float64]
 
@@ -74,9 +78,13 @@ def fit(
     usable = [_with_power(step, z0_ohm) for step in steps]
     _demand(usable)
     model = BenchModel(usable, ratings, z0_ohm, LAWS[detector])
-    vector, covariance = _solve(model)
+    _demand_power_in_bands(model)
+    solution = solve(model)
+    vector = solution.vector
     forward, reflected = model.laws(vector)
-    found = [band_of_fit(model, vector, covariance, band, match_return_loss_db) for band in range(len(model.bands))]
+    found = [
+        band_of_fit(model, vector, solution.covariance, band, match_return_loss_db) for band in range(len(model.bands))
+    ]
     bridge = Bridge(
         name=name,
         full_scale=full_scale,
@@ -96,7 +104,7 @@ def fit(
     residuals = tuple(
         StepResidual(step, what, float(value)) for (step, what), value in zip(model.residual_steps, sigmas, strict=True)
     )
-    notes = _notes(model, [known for _, known in found])
+    notes = _notes(model, [known for _, known in found], solution.settled)
     return Fit(bridge, model.scatter, residuals, float(np.mean(sigmas**2)), notes)
 
 
@@ -132,31 +140,50 @@ def _demand(steps: list[BenchStep]) -> None:
             )
 
 
+def _demand_power_in_bands(model: BenchModel) -> None:
+    """Raise SheetError where a band has no known power: its gain would hang in the air."""
+    with_power = set(model.band[model.of_kind["power"]].tolist())
+    for band, hz in enumerate(model.bands):
+        if band not in with_power:
+            raise SheetError(
+                f"there are steps at {hz / 1e6:.3f} MHz but no power step; wanted at least one with a known power into "
+                "the dummy load there, as it gives the band its gain"
+            )
+
+
 def _dark_mean(steps: list[BenchStep]) -> float:
     return float(np.mean([step.forward for step in steps if step.kind == "dark"]))
 
 
-def _solve(model: BenchModel) -> tuple[Array, Array]:
-    """Best vector over all starts, and its covariance; the laws of `model` are refined on the way."""
-    best = min((_descend(model, start) for start in start_vectors(model)), key=lambda found: found[1])[0]
+@dataclass(frozen=True, slots=True)
+class Solution:
+    """Best vector of a model, its covariance, its cost, and whether the search came to rest."""
+
+    vector: Array
+    covariance: Array
+    settled: bool
+
+
+def solve(model: BenchModel) -> Solution:
+    """Best vector over all starts; the laws and the wattmeter's scatter of `model` are refined on the way."""
+    best = min((_descend(model, start) for start in start_vectors(model)), key=lambda found: float(found.cost))
     for _ in range(4):
         before = model.scatter
-        model.refine_laws(best)
-        model.scatter = _scatter(model, best)
-        best = _descend(model, best)[0]
+        model.refine_laws(best.x)
+        model.scatter = scatter_of(model, best.x)
+        best = _descend(model, best.x)
         if abs(model.scatter - before) < 0.02 * before:
             break
-    jacobian = _jacobian(model.residuals)(best)
-    return best, np.asarray(np.linalg.inv(jacobian.T @ jacobian), dtype=float)
+    jacobian = _jacobian(model.residuals)(best.x)
+    covariance = np.asarray(np.linalg.inv(jacobian.T @ jacobian), dtype=float)
+    return Solution(np.asarray(best.x), (covariance + covariance.T) / 2.0, best.status > 0)
 
 
-def _descend(model: BenchModel, start: Array) -> tuple[Array, float]:
+def _descend(model: BenchModel, start: Array) -> OptimizeResult:
     from scipy.optimize import least_squares
 
-    found = least_squares(
-        model.residuals, start, jac=_jacobian(model.residuals), method="lm", x_scale="jac", max_nfev=_MOST_STEPS
-    )
-    return found.x, float(found.cost)
+    jacobian = _jacobian(model.residuals)
+    return least_squares(model.residuals, start, jac=jacobian, method="lm", x_scale="jac", max_nfev=_MOST_STEPS)
 
 
 def _jacobian(residuals: Callable[[Array], Array]) -> Callable[[Array], Array]:
@@ -171,7 +198,7 @@ def _jacobian(residuals: Callable[[Array], Array]) -> Callable[[Array], Array]:
     return jacobian
 
 
-def _scatter(model: BenchModel, vector: Array) -> float:
+def scatter_of(model: BenchModel, vector: Array) -> float:
     """The wattmeter's scatter from its residuals, less the freedom they have given to laws and gains."""
     sigmas = model.residuals(vector)[: len(model.residual_steps)]
     of_power = np.array([what == "power" for _, what in model.residual_steps])
@@ -196,9 +223,9 @@ def _reference_pct(steps: list[BenchStep], ratings: BenchRatings) -> float:
     return ratings.reference_pct * ratings.reference_full_scale_w / max(powers)
 
 
-def _notes(model: BenchModel, identified: list[bool]) -> tuple[str, ...]:
+def _notes(model: BenchModel, identified: list[bool], settled: bool) -> tuple[str, ...]:
     """What the steps left open, as sentences."""
-    said = []
+    said = [] if settled else ["the fit did not come to rest: these steps do not determine all that it looks for"]
     if len(model.of_kind["reversed"]) == 0:
         said.append("no reversed step: the reflected detector's law leans on the forward one's")
     if len(model.of_kind["load"]) == 0:

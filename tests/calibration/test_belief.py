@@ -10,7 +10,7 @@ import pytest
 from scipy.stats import binom
 
 from calibration.directivity import hard_bound
-from calibration.fit import _scatter, _solve
+from calibration.fit import scatter_of, solve
 from calibration.fit_model import BenchModel
 from calibration.laws import LAWS
 from calibration.meter import Meter, counting_sd
@@ -161,17 +161,17 @@ def test_residuals_pass_and_a_model_with_the_reversed_leak_for_c_does_not(bits):
     """
     sheet = shed.sheet(bits)
     right = BenchModel(list(sheet.steps), sheet.ratings, 50.0, LAWS["diode"])
-    vector, _ = _solve(right)
+    vector = solve(right).vector
     wrong = LeakForMatch(list(sheet.steps), sheet.ratings, 50.0, LAWS["diode"])
     wrong.held = np.array([right.reversed_leaks(vector)[band] for band in range(len(right.bands))])
-    mistaken, _ = _solve(wrong)
+    mistaken = solve(wrong).vector
     good, bad = count_residuals(right, vector), count_residuals(wrong, mistaken)
     for name, sigmas in (("right", good), ("mistaken", bad)):
         print(f"{bits} bit, {name}: worst {np.abs(sigmas).max():.1f} sd, {np.mean(sigmas**2):.2f} per residual")
-    print(f"{bits} bit: wattmeter's scatter {100 * _scatter(right, vector):.2f} %")
+    print(f"{bits} bit: wattmeter's scatter {100 * scatter_of(right, vector):.2f} %")
     assert np.abs(good).max() < 4.0
     assert np.mean(good**2) <= 1.5
-    assert 0.004 < _scatter(right, vector) < 0.012
+    assert 0.004 < scatter_of(right, vector) < 0.012
     rise = float(np.sum(wrong.residuals(mistaken) ** 2) - np.sum(right.residuals(vector) ** 2))
     print(f"{bits} bit: chi-square with priors rises by {rise:.0f}")
     assert rise > 25.0

@@ -93,6 +93,10 @@ def _kinds(*kinds):
         (lambda: _kinds("dark", "load"), "0 power steps; wanted at least 3"),
         (lambda: [*_kinds("dark", "power"), BenchStep("power", 500.0, 9.0, 14.2e6)], "step 25 .power. has no power_w"),
         (lambda: [*_kinds("dark", "power"), BenchStep("power", 500.0, 9.0, power_w=1.0)], "step 25 .* no frequency_hz"),
+        (
+            lambda: [*_kinds("dark", "power"), BenchStep("load", 500.0, 99.0, 50e6, load="100")],
+            "at 50.000 MHz but no power",
+        ),
         (lambda: [*_kinds("dark", "power"), BenchStep("load", 4.0, 9.0, 14.2e6, load="100")], "was the transmitter on"),
     ],
 )
