@@ -64,4 +64,20 @@
 #define CREST_TALLIES 10
 #endif
 
+/* A conditions frame every so many seconds; 0: none, for as it stands the example knows none of the three below.
+ * Each may be a number or a call of yours (declare it here), which is made between two tallies and has to be back
+ * well within PERIOD_MS. */
+#ifndef CONDITIONS_S
+#define CONDITIONS_S 0
+#endif
+#ifndef TEMPERATURE_C100
+#define TEMPERATURE_C100 BW_TEMPERATURE_UNKNOWN /* 0.01 degC, near the detectors */
+#endif
+#ifndef SUPPLY_MV
+#define SUPPLY_MV 0
+#endif
+#ifndef FREQUENCY_HZ
+#define FREQUENCY_HZ 0 /* of the transmitter */
+#endif
+
 #endif

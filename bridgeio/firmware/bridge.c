@@ -10,6 +10,7 @@
 #include <avr/interrupt.h>
 #include <avr/io.h>
 #include <avr/sleep.h>
+#include <avr/wdt.h>
 #include <stdint.h>
 #include <util/delay.h>
 
@@ -40,6 +41,9 @@
 #endif
 #if TRUE_BAUD * 1000 > BAUD * 1025 || TRUE_BAUD * 1000 < BAUD * 975
 #error "the serial clock cannot meet BAUD within 2.5 %"
+#endif
+#if CONDITIONS_S * 1000UL / PERIOD_MS > 65535
+#error "CONDITIONS_S is too long for a count of 16 bits"
 #endif
 
 _Static_assert(sizeof BRIDGE_NAME <= BW_NAME_BYTES + 1, "BRIDGE_NAME has more than 12 bytes");
@@ -139,7 +143,7 @@ static void await_stretch(struct stretch *taken)
 
 /* ---- sending --------------------------------------------------------------------------------------------- */
 
-#define RING_BYTES 128 /* a power of two; a nameplate, a tally and a crest together are 79 */
+#define RING_BYTES 128 /* a power of two; one frame of each kind the example sends makes 113 */
 
 static uint8_t ring[RING_BYTES];
 static volatile uint8_t ring_in, ring_out;
@@ -194,6 +198,22 @@ static uint8_t next_boot(void)
     return boot;
 }
 
+/* The chip's own note of what started it; where a boot loader has wiped it out, the cause is not known. */
+static uint8_t start_cause(void)
+{
+    uint8_t noted = MCUSR;
+
+    MCUSR = 0;     /* or the next start would show this cause too */
+    wdt_disable(); /* a watchdog that has struck runs on, at its shortest */
+    if (noted & _BV(PORF)) /* first: while the power rises the others may be set as well */
+        return BW_REMARK_STARTED_BY_POWER;
+    if (noted & _BV(BORF))
+        return BW_REMARK_STARTED_BY_BROWN_OUT;
+    if (noted & _BV(WDRF))
+        return BW_REMARK_STARTED_BY_WATCHDOG;
+    return noted & _BV(EXTRF) ? BW_REMARK_STARTED_BY_RESET_PIN : BW_REMARK_STARTED;
+}
+
 /* Three nameplates in the first second, for a host that is waiting; then one every two seconds. */
 static uint8_t nameplate_due(void)
 {
@@ -242,6 +262,23 @@ static const struct bw_crest *crest_with(const struct stretch *now)
 }
 #endif
 
+#if CONDITIONS_S
+/* Returns the conditions at once, then every CONDITIONS_S seconds; in between nothing. */
+static const struct bw_conditions *conditions_if_due(void)
+{
+    static struct bw_conditions conditions;
+    static uint16_t wait;
+
+    if (wait--)
+        return 0;
+    wait = CONDITIONS_S * 1000UL / PERIOD_MS - 1;
+    conditions.temperature_c100 = TEMPERATURE_C100;
+    conditions.supply_mv = SUPPLY_MV;
+    conditions.frequency_hz = FREQUENCY_HZ;
+    return &conditions;
+}
+#endif
+
 int main(void)
 {
     struct bw_nameplate plate = {
@@ -250,11 +287,12 @@ int main(void)
         .summed = SUMMED,
         .full_scale = (uint32_t)SUMMED * TOP_CODE,
         .reference_mv = REFERENCE_MV,
-        .features = CREST_TALLIES ? BW_SENDS_CRESTS : 0,
+        .features = (CREST_TALLIES ? BW_SENDS_CRESTS : 0) | (CONDITIONS_S ? BW_SENDS_CONDITIONS : 0),
         .bridge_file_id = BRIDGE_FILE_ID,
         .firmware_version = FIRMWARE_VERSION,
         .name = BRIDGE_NAME,
     };
+    struct bw_remark started = {.code = start_cause()};
     struct bw_line line = {0, 0};
     struct bw_tally tally;
     struct stretch now;
@@ -267,6 +305,15 @@ int main(void)
         await_stretch(&now);
         if (nameplate_due())
             send(&line, frame, bw_put_nameplate(&line, frame, now.ms, &plate));
+        if (started.code) { /* once, behind the nameplate: who speaks, then what there is to say */
+            send(&line, frame, bw_put_remark(&line, frame, now.ms, &started));
+            started.code = 0;
+        }
+#if CONDITIONS_S
+        const struct bw_conditions *conditions = conditions_if_due();
+        if (conditions)
+            send(&line, frame, bw_put_conditions(&line, frame, now.ms, conditions));
+#endif
         tally.forward = now.sum[FORWARD];
         tally.reflected = now.sum[REFLECTED];
         tally.flags = now.clipped;

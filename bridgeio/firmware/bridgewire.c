@@ -10,6 +10,10 @@
 #define KIND_TALLY 0x11
 #define KIND_NAMEPLATE 0x12
 #define KIND_CREST 0x13
+#define KIND_REMARK 0x14
+#define KIND_WIDE_TALLY 0x15
+#define KIND_CONDITIONS 0x16
+#define KIND_WIDE_CREST 0x17
 
 static uint8_t *put16(uint8_t *at, uint16_t value)
 {
@@ -32,7 +36,8 @@ static uint8_t *open_frame(struct bw_line *line, uint8_t *out, uint8_t kind, uin
 }
 
 /* The polynomial's taps are 12 and 5 apart, so a whole byte folds in at once with two nibble shifts: no table,
- * no loop over bits. CRC-16/CCITT-FALSE: start 0xFFFF, polynomial 0x1021. Written with bytes because the small machines have no others. */
+ * no loop over bits. CRC-16/CCITT-FALSE: start 0xFFFF, polynomial 0x1021. Written with bytes because the small
+ * machines have no others. */
 static uint16_t crc_step(uint16_t crc, uint8_t byte)
 {
     uint8_t fold = (uint8_t)((crc >> 8) ^ byte);
@@ -111,6 +116,53 @@ uint8_t bw_put_nameplate(struct bw_line *line, uint8_t *out, uint32_t ms, const 
     at = put16(at, plate->firmware_version);
     for (i = 0; i < BW_NAME_BYTES; ++i)
         *at++ = (uint8_t)plate->name[i];
+    return close_frame(out, at);
+}
+
+uint8_t bw_put_remark(struct bw_line *line, uint8_t *out, uint32_t ms, const struct bw_remark *remark)
+{
+    uint8_t *at = open_frame(line, out, KIND_REMARK, ms);
+    const char *text = remark->text;
+    uint8_t *length;
+
+    *at++ = remark->code;
+    at = put32(at, remark->argument);
+    length = at++;
+    for (*length = 0; text && *text && *length < BW_TEXT_BYTES; ++*length)
+        *at++ = (uint8_t)*text++;
+    return close_frame(out, at);
+}
+
+uint8_t bw_put_conditions(struct bw_line *line, uint8_t *out, uint32_t ms, const struct bw_conditions *conditions)
+{
+    uint8_t *at = open_frame(line, out, KIND_CONDITIONS, ms);
+
+    at = put16(at, (uint16_t)conditions->temperature_c100);
+    at = put16(at, conditions->supply_mv);
+    at = put32(at, conditions->frequency_hz);
+    return close_frame(out, at);
+}
+
+uint8_t bw_put_wide_tally(struct bw_line *line, uint8_t *out, uint32_t ms, const struct bw_wide_tally *tally)
+{
+    uint8_t *at = open_frame(line, out, KIND_WIDE_TALLY, ms);
+
+    at = put32(at, tally->forward);
+    at = put32(at, tally->reflected);
+    *at++ = take_owed(line, tally->flags);
+    return close_frame(out, at);
+}
+
+uint8_t bw_put_wide_crest(struct bw_line *line, uint8_t *out, uint32_t ms, const struct bw_wide_crest *crest)
+{
+    uint8_t *at = open_frame(line, out, KIND_WIDE_CREST, ms);
+
+    at = put32(at, crest->forward_mean);
+    at = put32(at, crest->reflected_mean);
+    at = put32(at, crest->forward_crest);
+    at = put32(at, crest->reflected_at_crest);
+    at = put16(at, crest->conversions);
+    *at++ = take_owed(line, crest->flags);
     return close_frame(out, at);
 }
 

@@ -13,9 +13,10 @@ from typing import Any
 
 import pytest
 
+from bridgeio.codes import REMARK_CODES
 from bridgeio.errors import FileError
 from bridgeio.firmware_kit import KIT_FILES, kit_text, write_kit
-from bridgeio.frames import FLAG_DROPPED, KINDS, Crest, Item, Nameplate, Tallies
+from bridgeio.frames import FLAG_DROPPED, KINDS, Conditions, Crest, Item, Nameplate, Remark, Tallies
 from bridgeio.framing import pack
 from tests.mcu.board import KIT, needs_gcc, run_tool, workshop
 from tui.__main__ import main
@@ -23,6 +24,8 @@ from tui.__main__ import main
 HOST_FLAGS = ("-std=c99", "-Wall", "-Wextra", "-Wpedantic", "-Wconversion", "-Werror")
 FRAMES = 10_000
 GUARD = b"\xa5" * 64
+#: Bytes of UTF-8 a field may hold.
+TEXT_LIMITS = {"name": 12, "text": 24}
 
 
 class Line(ctypes.Structure):
@@ -36,6 +39,30 @@ class CTally(ctypes.Structure):
 class CCrest(ctypes.Structure):
     _fields_ = [
         *((n, ctypes.c_uint16) for n in ("forward_mean", "reflected_mean", "forward_crest", "reflected_at_crest")),
+        ("conversions", ctypes.c_uint16),
+        ("flags", ctypes.c_uint8),
+    ]
+
+
+class CRemark(ctypes.Structure):
+    _fields_ = [("code", ctypes.c_uint8), ("argument", ctypes.c_uint32), ("text", ctypes.c_char_p)]
+
+
+class CConditions(ctypes.Structure):
+    _fields_ = [
+        ("temperature_c100", ctypes.c_int16),
+        ("supply_mv", ctypes.c_uint16),
+        ("frequency_hz", ctypes.c_uint32),
+    ]
+
+
+class CWideTally(ctypes.Structure):
+    _fields_ = [("forward", ctypes.c_uint32), ("reflected", ctypes.c_uint32), ("flags", ctypes.c_uint8)]
+
+
+class CWideCrest(ctypes.Structure):
+    _fields_ = [
+        *((n, ctypes.c_uint32) for n in ("forward_mean", "reflected_mean", "forward_crest", "reflected_at_crest")),
         ("conversions", ctypes.c_uint16),
         ("flags", ctypes.c_uint8),
     ]
@@ -71,6 +98,10 @@ ENCODERS = (
     Encoder("tally", CTally, Tallies.of),
     Encoder("nameplate", CNameplate, Nameplate),
     Encoder("crest", CCrest, Crest),
+    Encoder("remark", CRemark, Remark),
+    Encoder("wide_tally", CWideTally, functools.partial(Tallies.of, wide=True)),
+    Encoder("conditions", CConditions, Conditions),
+    Encoder("wide_crest", CWideCrest, functools.partial(Crest, wide=True)),
 )
 
 
@@ -101,15 +132,18 @@ def any_number(dice: random.Random, bits: int) -> int:
     return number & dice.choice((0xFFFFFFFF, 0xFF00FF00, 0x00FF00FF, 0xFFFFFFFF))
 
 
-def any_name(dice: random.Random) -> bytes:
-    """Up to 12 bytes of UTF-8."""
-    return "".join(dice.choices("aZ0 -ü€", k=dice.randint(0, 12))).encode()[:12].decode(errors="ignore").encode()
+def any_text(dice: random.Random, limit: int) -> bytes:
+    """Up to `limit` bytes of UTF-8."""
+    text = "".join(dice.choices("aZ0 -ü€", k=dice.randint(0, limit)))
+    return text.encode()[:limit].decode(errors="ignore").encode()
 
 
 def any_fields(dice: random.Random, struct: Any) -> dict[str, Any]:
     """Values for every field of a C struct."""
     return {
-        name: any_name(dice) if name == "name" else any_number(dice, 8 * ctypes.sizeof(kind))
+        name: any_text(dice, TEXT_LIMITS[name])
+        if name in TEXT_LIMITS
+        else kind(any_number(dice, 8 * ctypes.sizeof(kind))).value
         for name, kind in struct._fields_
     }
 
@@ -123,7 +157,7 @@ def test_encoder_makes_the_reference_bytes_for_random_frames(one: Encoder) -> No
     for number in range(FRAMES):
         fields, ms = any_fields(dice, one.struct), any_number(dice, 32)
         made = put(one.kind, line, ms, one.struct(**fields))
-        told = {**fields, "name": fields["name"].decode()} if "name" in fields else fields
+        told = {name: value.decode() if name in TEXT_LIMITS else value for name, value in fields.items()}
         assert made == pack(one.frame(seq=number % 256, ms=ms, **told)), (fields, ms)
 
 
@@ -140,6 +174,14 @@ def test_encoder_says_once_that_frames_were_dropped(one: Encoder) -> None:
 
 
 @needs_gcc
+def test_remark_without_text_or_with_too_long_a_one() -> None:
+    """No text at all is an empty one; of a text that is too long the first 24 bytes go out."""
+    line, text = Line(), "the relay on the roof does not answer"
+    assert put("remark", line, 5, CRemark(0x80, 7, None)) == pack(Remark(0, 5, 0x80, 7, ""))
+    assert put("remark", line, 6, CRemark(0x80, 7, text.encode())) == pack(Remark(1, 6, 0x80, 7, text[:24]))
+
+
+@needs_gcc
 def test_encoder_needs_nothing_from_any_library() -> None:
     """The object has no undefined symbol: no heap, no stdio, no floating point, not even memcpy."""
     out = workshop() / "bridgewire.o"
@@ -149,11 +191,24 @@ def test_encoder_needs_nothing_from_any_library() -> None:
 
 def test_header_tells_the_lengths_of_the_wire() -> None:
     """BW_..._BYTES in the header are the wire bytes in the table of kinds."""
-    told = dict(re.findall(r"#define BW_(\w+)_BYTES (\d+)", kit_text("bridgewire.h").decode()))
-    lengths = {kind.name: kind.wire_bytes() for kind in KINDS}
-    assert {one.kind: int(told[one.kind.upper()]) for one in ENCODERS} == {
-        one.kind: lengths[one.kind] for one in ENCODERS
-    }
+    header = kit_text("bridgewire.h").decode()
+    told = dict(re.findall(r"#define BW_(\w+)_BYTES (\d+)", header))
+    lengths = {kind.name.replace(" ", "_").upper(): kind.wire_bytes(kind.text_limit) for kind in KINDS}
+    assert {name: int(told[name]) for name in lengths} == lengths
+    assert max(lengths.values()) == lengths[re.findall(r"BW_LONGEST_BYTES BW_(\w+)_BYTES", header)[0]]
+
+
+def test_kit_packs_every_kind_of_the_wire() -> None:
+    """No kind in the table is without its function in the header."""
+    functions = re.findall(r"^uint8_t bw_put_(\w+)\(", kit_text("bridgewire.h").decode(), re.MULTILINE)
+    assert sorted(functions) == sorted(kind.name.replace(" ", "_") for kind in KINDS)
+    assert sorted(functions) == sorted(one.kind for one in ENCODERS)
+
+
+def test_header_tells_the_remark_codes_of_the_wire() -> None:
+    """The codes in the header are those of the table, each once."""
+    told = re.findall(r"#define BW_REMARK_\w+ (0x\w+)", kit_text("bridgewire.h").decode())
+    assert [int(number, 16) for number in told] == list(REMARK_CODES)
 
 
 def test_kit_lists_every_file_of_its_folder() -> None:

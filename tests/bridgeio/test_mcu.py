@@ -19,16 +19,23 @@ from bridgeio.frames import (
     FLAG_DROPPED,
     FLAG_FORWARD_CLIPPED,
     FLAG_REFLECTED_CLIPPED,
+    TEMPERATURE_UNKNOWN,
+    Conditions,
     Crest,
     Item,
     Nameplate,
+    Remark,
     Tallies,
 )
 from bridgeio.framing import pack
 from bridgeio.receiver import Receiver
 from tests.mcu.board import (
+    BROWN_OUT,
     FULL_CODE,
     KIT,
+    POWER_ON,
+    RESET_PIN,
+    WATCHDOG,
     Board,
     avr_elf,
     code,
@@ -43,7 +50,7 @@ FLASH_LIMIT, CYCLES_LIMIT = 450, 1800
 PERIOD_MS, SUMMED, SLOT_MS = 10, 16, 10 / 32
 RUN_MS = 40_000
 
-Frame = TypeVar("Frame", Nameplate, Crest)
+Frame = TypeVar("Frame", Nameplate, Crest, Remark, Conditions)
 
 
 def received(data: bytes) -> tuple[list[Item], Receiver]:
@@ -93,6 +100,7 @@ def figures() -> dict[str, int]:
     return {
         "tally path, flash": path_text,
         "tally path, static RAM": path_data + path_bss,
+        "encoder with every kind, flash": sizes(encoder_object())[0],
         "tally, fewest cycles": min(cycles),
         "tally, median cycles": int(statistics.median(cycles)),
         "tally, most cycles": max(cycles),
@@ -101,16 +109,23 @@ def figures() -> dict[str, int]:
     }
 
 
+def encoder_object() -> Path:
+    """The whole encoder, compiled and not linked, so that nothing is left out."""
+    out = workshop() / "bridgewire.avr.o"
+    run_tool("avr-gcc", "-mmcu=atmega328p", "-std=c99", "-Os", "-c", KIT / "bridgewire.c", "-o", out)
+    return out
+
+
 def sizes(elf: Path) -> tuple[int, int, int]:
-    """text, data and bss [bytes] of a linked program, libraries included."""
+    """text, data and bss [bytes] of a program, linked or not."""
     text, data, bss = run_tool("avr-size", elf).splitlines()[1].split()[:3]
     return int(text), int(data), int(bss)
 
 
 @functools.cache
 def timed_tallies() -> tuple[list[int], bytes]:
-    """Cycles a packed tally for 2000 tallies full of zero bytes and not, marks' own cost off, and their frames."""
-    with Board(firmware=avr_elf(source="cycles.c"), stop_after_ms=1000) as board:
+    """Cycles a packed tally for 2000 tallies full of zero bytes and not, marks' own cost off, and all frames sent."""
+    with Board(firmware=avr_elf(source="cycles.c"), stop_after_ms=4000) as board:
         data = board.read_to_end()
         own, *cycles = board.cycles()
     return [count - own for count in cycles], data
@@ -124,9 +139,7 @@ def test_tally_path_fits_its_flash_and_takes_no_ram() -> None:
 
 def test_encoder_has_no_static_memory() -> None:
     """The whole encoder, every kind, has neither data nor bss."""
-    out = workshop() / "bridgewire.avr.o"
-    run_tool("avr-gcc", "-mmcu=atmega328p", "-std=c99", "-Os", "-c", KIT / "bridgewire.c", "-o", out)
-    assert sizes(out)[1:] == (0, 0)
+    assert sizes(encoder_object())[1:] == (0, 0)
 
 
 def test_tally_takes_few_cycles() -> None:
@@ -139,9 +152,9 @@ def test_tally_takes_few_cycles() -> None:
 def test_chip_packs_the_same_bytes_as_the_host() -> None:
     """Compiled for the 8-bit machine, with its 16-bit int, the encoder still makes the reference bytes."""
     _, data = timed_tallies()
-    items, _ = received(data)
-    assert len(tallies_of(items)) == 2000
-    assert pack(tallies_of(items)) == data
+    items, receiver = received(data)
+    assert {kind: n for kind, n in receiver.counters.frames.items() if n} == {0x11: 2000, 0x15: 2000, 0x17: 2000}
+    assert b"".join(pack(item) for item in items) == data
 
 
 def test_readme_tells_the_figures_as_measured() -> None:
@@ -170,9 +183,10 @@ def staircase(seed: int) -> list[tuple[float, int, int]]:
 
 @functools.cache
 def long_run() -> tuple[list[tuple[float, int, int]], bytes]:
-    """A staircase, and all that the chip said about it."""
+    """A staircase, and all that the chip said about it, every kind that the example can send in between."""
     levels = staircase(7)
-    with Board(levels, stop_after_ms=RUN_MS) as board:
+    choices = ("CONDITIONS_S=10", "TEMPERATURE_C100=-525", "FREQUENCY_HZ=14100000UL")
+    with Board(levels, firmware=avr_elf(*choices), stop_after_ms=RUN_MS) as board:
         return levels, board.read_to_end()
 
 
@@ -271,7 +285,7 @@ def test_first_byte_is_a_lone_delimiter_and_the_first_frame_a_nameplate() -> Non
         summed=SUMMED,
         full_scale=SUMMED * FULL_CODE,
         reference_mv=1100,
-        features=1,
+        features=3,
         bridge_file_id=0,
         firmware_version=1,
         name="my bridge",
@@ -283,6 +297,64 @@ def test_nameplates_come_thrice_in_the_first_second_then_every_two() -> None:
     times = [plate.ms for plate in only(Nameplate, received(long_run()[1])[0])]
     assert len([ms for ms in times if ms < 1000]) == 3
     assert {b - a for a, b in itertools.pairwise(times[2:])} == {2000}
+
+
+def test_remark_tells_once_that_power_was_applied() -> None:
+    """Behind the first nameplate comes the cause of the start, and no other remark in 40 s."""
+    items, _ = received(long_run()[1])
+    assert items[1] == Remark(seq=1, ms=PERIOD_MS, code=0x02, argument=0, text="")
+    assert len(only(Remark, items)) == 1
+
+
+def test_conditions_come_at_once_and_every_ten_seconds() -> None:
+    """By device time, with what the board was told and the supply not known."""
+    conditions = only(Conditions, received(long_run()[1])[0])
+    assert [(one.ms, one.temperature_c100, one.supply_mv, one.frequency_hz) for one in conditions] == [
+        (PERIOD_MS + 10_000 * n, -525, 0, 14_100_000) for n in range(4)
+    ]
+
+
+def test_conditions_of_a_board_that_knows_nothing_say_so() -> None:
+    """Asked for without a value, they tell temperature, supply and frequency as not known."""
+    with Board(firmware=avr_elf("CONDITIONS_S=1"), stop_after_ms=200) as board:
+        items, _ = received(board.read_to_end())
+    assert only(Conditions, items) == [Conditions(2, PERIOD_MS, TEMPERATURE_UNKNOWN, 0, 0)]
+
+
+def test_example_as_shipped_sends_no_conditions() -> None:
+    """It knows none of them: no frame comes, and the nameplate promises none."""
+    with Board(stop_after_ms=1500) as board:
+        items, _ = received(board.read_to_end())
+    assert only(Conditions, items) == []
+    assert [plate.features for plate in only(Nameplate, items)] == [1] * 3
+
+
+@pytest.mark.parametrize(
+    ("noted", "remark"),
+    [
+        (POWER_ON, 0x02),
+        (POWER_ON | RESET_PIN | BROWN_OUT, 0x02),
+        (RESET_PIN, 0x03),
+        (BROWN_OUT, 0x04),
+        (WATCHDOG, 0x05),
+        (0, 0x01),
+    ],
+)
+def test_remark_tells_what_the_chip_noted_of_its_start(noted: int, remark: int) -> None:
+    """Each cause has its code; power comes before what goes with it, and a note wiped out is not known."""
+    with Board(cause=noted, stop_after_ms=150) as board:
+        items, _ = received(board.read_to_end())
+    assert [one.code for one in only(Remark, items)] == [remark]
+
+
+def test_bridge_starts_again_when_its_watchdog_strikes() -> None:
+    """A watchdog set and never fed strikes and runs on: each start ends it, says it, and forgets it."""
+    strike = "TEMPERATURE_C100=({ wdt_enable(WDTO_15MS); 0; })"
+    with Board(firmware=avr_elf("CONDITIONS_S=1", strike), stop_after_ms=300) as board:
+        items, _ = received(board.read_to_end())
+    codes = [one.code for one in only(Remark, items)]
+    assert len(codes) >= 3
+    assert codes == [0x02] + [0x05] * (len(codes) - 1)
 
 
 def test_clipped_conversions_are_flagged_by_channel() -> None:
@@ -310,6 +382,7 @@ def test_reset_starts_afresh_with_another_boot() -> None:
     second = [n for n, plate in enumerate(plates) if plate.seq == 0][1]
     assert [plate.boot for plate in plates] == [1] * second + [2] * (len(plates) - second)
     assert plates[second].ms == PERIOD_MS
+    assert [remark.code for remark in only(Remark, items)] == [0x02, 0x03]
     assert (receiver.counters.lost, receiver.counters.resets) == (0, 1)
 
 

@@ -33,10 +33,14 @@ from typing import Self
 import pytest
 
 __all__ = [
+    "BROWN_OUT",
     "FULL_CODE",
     "HARNESS_FLAGS",
     "KIT",
+    "POWER_ON",
     "REFERENCE_MV",
+    "RESET_PIN",
+    "WATCHDOG",
     "Board",
     "avr_elf",
     "code",
@@ -60,6 +64,8 @@ AVR_SECTIONS = ("-ffunction-sections", "-fdata-sections", "-Wl,--gc-sections")
 PATIENCE_S = 20.0
 #: The example's reference [mV] and the converter's top code.
 REFERENCE_MV, FULL_CODE = 1100, 1023
+#: Bits of MCUSR, the chip's note of what started it.
+POWER_ON, RESET_PIN, BROWN_OUT, WATCHDOG = 1, 2, 4, 8
 
 _HAVE_GCC = shutil.which("gcc") is not None
 _HAVE_BOARD = _HAVE_GCC and shutil.which("avr-gcc") is not None and SIMAVR.is_dir()
@@ -111,7 +117,7 @@ class Board:
     """A running chip. `waveform` holds (ms, forward_mv, reflected_mv), each in force until the next; mV to a tenth.
 
     It is held until `run()`, so that a reader can open `path` first and miss nothing; after `stop_after_ms` of
-    simulated time it falls silent and stays so until it is left.
+    simulated time it falls silent and stays so until it is left. `cause` is what the chip notes of its first start.
     """
 
     path: str
@@ -124,10 +130,11 @@ class Board:
         paced: bool = False,
         stop_after_ms: float = 0,
         reset_after_ms: float = 0,
+        cause: int = POWER_ON,
     ) -> None:
         self._firmware, self._waveform = firmware, list(waveform)
         self._options = ["--hold", "--stop-after", str(stop_after_ms), "--reset-after", str(reset_after_ms)]
-        self._options += ["--paced"] * paced
+        self._options += ["--cause", str(cause), *["--paced"] * paced]
         self._said: list[str] = []
         self._news = threading.Condition()
 

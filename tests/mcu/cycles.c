@@ -1,7 +1,8 @@
 /* cycles: what packing one tally costs on the chip, and that the chip packs the same bytes as the host.
  *
  * Packs tallies made of a little generator's numbers between two marks the harness times, and sends each frame.
- * The marks around nothing come first: their own cost. SPDX-License-Identifier: MIT
+ * The marks around nothing come first: their own cost. Wide tallies and wide crests, which the example never sends,
+ * follow untimed. SPDX-License-Identifier: MIT
  */
 #include <avr/io.h>
 #include <avr/sleep.h>
@@ -20,27 +21,37 @@ static uint32_t next(uint32_t *state)
     return *state;
 }
 
-/* A number with each of its bytes left out at even odds, so that zeros come in every pattern. */
-static uint32_t holed(uint32_t *state)
+/* Any bytes, each left out at even odds, so that zeros come in every pattern. */
+static void fill(void *thing, uint8_t size)
 {
-    uint32_t value = next(state);
-    uint32_t holes = next(state);
-    uint8_t i;
+    static uint32_t state = 2463534242UL;
+    uint8_t *byte = thing;
 
-    for (i = 0; i < 4; ++i)
-        if (holes >> i & 1)
-            value &= ~((uint32_t)0xFF << 8 * i);
-    return value;
+    for (; size; --size) {
+        uint32_t value = next(&state);
+        *byte++ = value & 0x100 ? (uint8_t)value : 0;
+    }
+}
+
+static void send(const uint8_t *frame, uint8_t length)
+{
+    for (; length; --length) {
+        while (!(UCSR0A & _BV(UDRE0)))
+            ;
+        UDR0 = *frame++;
+    }
 }
 
 int main(void)
 {
     struct bw_line line = {0, 0};
     struct bw_tally tally;
-    uint8_t frame[BW_TALLY_BYTES];
-    uint32_t state = 2463534242UL, ms;
+    struct bw_wide_tally wide;
+    struct bw_wide_crest crest;
+    uint8_t frame[BW_LONGEST_BYTES];
+    uint32_t ms;
     uint16_t round;
-    uint8_t length, i;
+    uint8_t length;
 
     UCSR0A = _BV(U2X0);
     UBRR0 = 0;
@@ -48,18 +59,18 @@ int main(void)
     GPIOR0 = 1;
     GPIOR0 = 2;
     for (round = 0; round < ROUNDS; ++round) {
-        ms = holed(&state);
-        tally.forward = (uint16_t)holed(&state);
-        tally.reflected = (uint16_t)holed(&state);
-        tally.flags = (uint8_t)holed(&state);
+        fill(&ms, sizeof ms);
+        fill(&tally, sizeof tally);
         GPIOR0 = 1;
         length = bw_put_tally(&line, frame, ms, &tally);
         GPIOR0 = 2;
-        for (i = 0; i < length; ++i) {
-            while (!(UCSR0A & _BV(UDRE0)))
-                ;
-            UDR0 = frame[i];
-        }
+        send(frame, length);
+    }
+    for (round = 0; round < ROUNDS; ++round) {
+        fill(&wide, sizeof wide);
+        fill(&crest, sizeof crest);
+        send(frame, bw_put_wide_tally(&line, frame, ms, &wide));
+        send(frame, bw_put_wide_crest(&line, frame, ms, &crest));
     }
     for (;;)
         ;

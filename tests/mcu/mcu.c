@@ -8,6 +8,8 @@
  * first is for settling, on the second's time its raster hangs). Standard input takes, a line each:  run | reset |
  * quit. After the end the line stays up, silent, until quit, so that what is still under way reaches the reader.
  *
+ * What started the chip stands in its MCUSR: at first power, or the bits given as --cause; after a reset the reset pin.
+ *
  * The waveform file holds lines `ms forward_mv reflected_mv`, times rising; each line holds until the next, the
  * last one for ever, and before the first both inputs are at 0. Time runs from the last start or reset; millivolts
  * are taken to a tenth.
@@ -48,10 +50,13 @@
 
 /* ATmega328P: data-space addresses. */
 #define GPIOR0 0x3E
+#define MCUSR 0x54
 #define UCSR0A 0xC0
 #define UBRR0L 0xC4
 #define UBRR0H 0xC5
 #define U2X0 0x02
+#define PORF 0x01
+#define EXTRF 0x02
 
 struct step {
     double ms;
@@ -61,8 +66,8 @@ struct step {
 static struct {
     const char *elf, *waveform;
     double stop_ms, reset_ms;
-    int forward_input, reflected_input, paced, held;
-} asked = {.reflected_input = 1};
+    int forward_input, reflected_input, paced, held, cause;
+} asked = {.reflected_input = 1, .cause = PORF};
 
 static struct {
     avr_t *avr;
@@ -178,6 +183,7 @@ static double simulated_ms(void) { return (double)mcu.avr->cycle / CYCLES_A_MS; 
 static void reset(void)
 {
     avr_reset(mcu.avr);
+    mcu.avr->data[MCUSR] = EXTRF;
     mcu.born = mcu.avr->cycle;
     mcu.step = 0;
     mcu.conversions = 0;
@@ -335,6 +341,7 @@ static void power_up(void)
     avr_irq_register_notify(mcu.adc + ADC_IRQ_OUT_TRIGGER, on_conversion, NULL);
     avr_irq_register_notify(avr_io_getirq(avr, AVR_IOCTL_UART_GETIRQ('0'), UART_IRQ_OUTPUT), on_byte, NULL);
     avr_register_io_write(avr, GPIOR0, on_mark, NULL);
+    avr->data[MCUSR] = (uint8_t)asked.cause;
 }
 
 static void run_a_millisecond(void)
@@ -381,14 +388,15 @@ static void linger(void)
 /* ---- command line ---------------------------------------------------------------------------------------- */
 
 static const char usage[] =
-    "usage: mcu [--waveform FILE] [--stop-after MS] [--reset-after MS] [--paced] [--hold]\n"
+    "usage: mcu [--waveform FILE] [--stop-after MS] [--reset-after MS] [--cause BITS] [--paced] [--hold]\n"
     "           [--forward-input N] [--reflected-input N] FIRMWARE.elf\n";
 
 static void read_options(int argc, char **argv)
 {
     static const struct option options[] = {
-        {"waveform", 1, 0, 'w'}, {"stop-after", 1, 0, 's'}, {"reset-after", 1, 0, 'z'}, {"paced", 0, 0, 'p'},
-        {"hold", 0, 0, 'h'}, {"forward-input", 1, 0, 'f'}, {"reflected-input", 1, 0, 'r'}, {0, 0, 0, 0}};
+        {"waveform", 1, 0, 'w'}, {"stop-after", 1, 0, 's'}, {"reset-after", 1, 0, 'z'}, {"cause", 1, 0, 'c'},
+        {"paced", 0, 0, 'p'}, {"hold", 0, 0, 'h'}, {"forward-input", 1, 0, 'f'}, {"reflected-input", 1, 0, 'r'},
+        {0, 0, 0, 0}};
     int option;
 
     while ((option = getopt_long(argc, argv, "", options, NULL)) != -1)
@@ -396,6 +404,7 @@ static void read_options(int argc, char **argv)
         case 'w': asked.waveform = optarg; break;
         case 's': asked.stop_ms = atof(optarg); break;
         case 'z': asked.reset_ms = atof(optarg); break;
+        case 'c': asked.cause = atoi(optarg); break;
         case 'p': asked.paced = 1; break;
         case 'h': asked.held = 1; break;
         case 'f': asked.forward_input = atoi(optarg) & 7; break;
