@@ -93,6 +93,8 @@ class Desk:
         self._before: Readings | None = None
         self._averager = Averager(self._how.average) if self._how.average > 1 else None
         self._next_seq: int | None = None
+        # A bridge that has sent nameplates owes one after a loss.
+        self._owes_plate = False
 
     @property
     def frequency_hz(self) -> float | None:
@@ -160,6 +162,19 @@ class Desk:
             elif isinstance(item, Conditions):
                 self._hear(item)
 
+    def reopened(self) -> None:
+        """The source was lost and is back, perhaps with another board: counts only until a nameplate has come.
+
+        A bridge that never sent one goes on at once.
+        """
+        self._owes_plate = self._owes_plate or self.nameplate is not None
+        self._nameless = self._nameless and not self._owes_plate
+        self.nameplate = self._since_ms = None
+        self._told_hz = self._told_c = self._before = self._next_seq = None
+        # What waits is of the old board and may not be read by the new one's calibration.
+        self._averager = None if self._averager is None else Averager(self._how.average)
+        self._device_clock.restart()
+
     def _hear(self, conditions: Conditions) -> None:
         self._device_s = conditions.ms / 1000.0
         if conditions.frequency_hz:
@@ -176,14 +191,14 @@ class Desk:
         if before is not None and (before.boot, before.device_id) != (nameplate.boot, nameplate.device_id):
             self._device_clock.restart()
             self._told_hz = self._told_c = self._before = self._next_seq = None
-        self.nameplate = nameplate
+        self.nameplate, self._owes_plate = nameplate, False
 
     def _listen(self, tallies: Tallies) -> None:
         """Note whether what comes is checked, and whether a nameplate should long have come with it."""
         self._checked = tallies.checked
         if tallies.has_ms:
             self._device_s = float(tallies.ms[-1]) / 1000.0
-        if self.nameplate is None and tallies.checked and tallies.has_ms:
+        if self.nameplate is None and not self._owes_plate and tallies.checked and tallies.has_ms:
             last_ms = int(tallies.ms[-1])
             if self._since_ms is None or last_ms < self._since_ms:
                 self._since_ms = int(tallies.ms[0])

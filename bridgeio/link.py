@@ -1,5 +1,7 @@
 """One reader thread between a source and those who listen: it alone opens, reads and closes the port.
 
+A port that was open and is gone is looked for until it is back, or the link is stopped.
+
 One rule: whatever happens in the thread reaches the listeners as a state in words, and nothing can keep the
 program from ending.
 """
@@ -12,8 +14,8 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
-from bridgeio.errors import BridgeIOError
-from bridgeio.ports import EndOfSource, Source
+from bridgeio.errors import BridgeIOError, LinkError
+from bridgeio.ports import EndOfSource, Returning, Source
 
 if TYPE_CHECKING:
     from bridgeio.frames import Item
@@ -26,12 +28,15 @@ PHASES: dict[str, str] = {
     "opening": "the port is being opened",
     "open": "frames come, or may come any moment",
     "silent": "open, but nothing readable has come for a while",
-    "lost": "the port did not open, is gone, or a listener failed",
+    "looking": "the port is gone and is looked for; open follows when it is back",
+    "lost": "the port did not open, is gone for good, or a listener failed",
     "ended": "a file or a simulation has come to its end, or the link was stopped",
 }
 
 #: A board that resets when its port opens needs up to this long to speak [s].
 SILENT_AFTER_S = 3.0
+#: A port that is gone is tried this often, at once the first time [s].
+TRY_EVERY_S = 0.5
 
 
 @dataclass(frozen=True, slots=True)
@@ -45,7 +50,10 @@ class LinkState:
 class Link:
     """Reads `source` through `receiver` in a daemon thread of its own.
 
-    `on_items(items, arrival_s)` and `on_state(state)` are called from that thread; arrival is in seconds UTC.
+    `on_items(items, arrival_s)`, `on_state(state)` and `on_reopened()` are called from that thread; arrival is in
+    seconds UTC. `on_reopened` comes when the source is back after a loss, before anything read from it: what was known
+    of the board no longer holds, for another one may have been plugged in. persist: a source that does not open at
+    first is looked for like one that was lost.
     """
 
     def __init__(
@@ -55,9 +63,14 @@ class Link:
         on_items: Callable[[list[Item], float], None],
         on_state: Callable[[LinkState], None],
         silent_after_s: float = SILENT_AFTER_S,
+        *,
+        on_reopened: Callable[[], None] = lambda: None,
+        persist: bool = False,
     ) -> None:
         self._source, self._receiver = source, receiver
-        self._on_items, self._on_state = on_items, on_state
+        self._on_items, self._on_state, self._on_reopened = on_items, on_state, on_reopened
+        self._persist = persist
+        self._tried_s = -TRY_EVERY_S
         self._silence = _Silence(silent_after_s)
         self._state = LinkState("opening", f"opening {source.name}")
         self._error: Exception | None = None
@@ -102,31 +115,75 @@ class Link:
         self._tell_last(final)
 
     def _session(self) -> LinkState:
-        """One opening of the port, until it is lost, ends, or we are stopped; closed again in any case."""
+        """From the first opening until the source is lost for good, ends, or we are stopped; closed in any case."""
         try:
             self._tell(self._state)
-            self._source.open()
-            self._silence.start()
-            self._tell(LinkState("open", f"{self._source.name} is open"))
+            self._open()
             while not self._stopping.is_set():
-                self._step(self._source.read())
+                try:
+                    data = self._source.read()
+                except LinkError as error:
+                    self._look_for(error)
+                else:
+                    self._step(data)
             return LinkState("ended", f"{self._source.name} is closed")
         finally:
             self._source.close()
+
+    def _open(self) -> None:
+        """Open for the first time. LinkError where that cannot be, unless we are to persist."""
+        self._tried_s = time.monotonic()
+        try:
+            self._source.open()
+        except LinkError as error:
+            if not self._persist:
+                raise
+            self._look_for(error)
+        else:
+            self._opened()
+
+    def _look_for(self, loss: LinkError) -> None:
+        """Try until the source is open again or we are stopped. Raises `loss` where the source never comes back."""
+        self._source.close()
+        if not isinstance(self._source, Returning):
+            raise loss
+        began_s, words = time.monotonic(), f"{loss}; looking for it"
+        while not self._stopping.is_set():
+            self._tell_new(LinkState("looking", f"{words} for {int(time.monotonic() - began_s)} s"))
+            # A port that opens and is gone at once, again and again, is not tried more often either.
+            if self._stopping.wait(max(0.0, self._tried_s + TRY_EVERY_S - time.monotonic())):
+                return
+            self._tried_s = time.monotonic()
+            try:
+                back, words = self._source.reopen(), f"{loss}; looking for it"
+            except LinkError as error:
+                back, words = False, f"{error}; trying again"
+            if back:
+                self._receiver.reopened()
+                self._on_reopened()
+                self._opened()
+                return
+
+    def _opened(self) -> None:
+        self._silence.start()
+        self._tell(LinkState("open", f"{self._source.name} is open"))
 
     def _step(self, data: bytes) -> None:
         arrival_s = time.time()
         items = self._receiver.feed(data) if data else []
         self._silence.heard(data, bool(items))
         state = self._silence.state() or LinkState("open", f"{self._source.name} is open")
-        if state != self._state:
-            self._tell(state)
+        self._tell_new(state)
         if items:
             self._on_items(items, arrival_s)
 
     def _tell(self, state: LinkState) -> None:
         self._state = state
         self._on_state(state)
+
+    def _tell_new(self, state: LinkState) -> None:
+        if state != self._state:
+            self._tell(state)
 
     def _tell_last(self, state: LinkState) -> None:
         """Tell the last state; a listener that fails even on this is kept for stop()."""

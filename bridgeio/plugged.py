@@ -1,4 +1,4 @@
-"""What is plugged in, and why a serial port does not open, in words that say what to do.
+"""What is plugged in, where it is now, and why a serial port does not open, in words that say what to do.
 
 One rule: nothing is opened here; a message names the device, what stands in the way, and the next step.
 """
@@ -15,16 +15,24 @@ from pathlib import Path
 
 from bridgeio.errors import LinkError
 
-__all__ = ["Port", "check_device", "in_words", "list_ports", "lost_errors"]
+__all__ = ["Port", "absent", "check_device", "find_again", "in_words", "list_ports", "lost_errors", "port_at"]
+
+_NOT_THERE = (errno.ENOENT, errno.ENOTDIR, errno.ENXIO, errno.ENODEV)
 
 
 @dataclass(frozen=True, slots=True)
 class Port:
-    """One serial port that is plugged in. Description and serial number are outside text."""
+    """One serial port that is plugged in. Description and serial number are outside text.
+
+    vid, pid and location are those of USB; the location ends in the interface (`1-2:1.0`) on some systems.
+    """
 
     device: str
     description: str
     serial_number: str | None
+    vid: int | None = None
+    pid: int | None = None
+    location: str | None = None
 
 
 def list_ports() -> list[Port]:
@@ -32,7 +40,45 @@ def list_ports() -> list[Port]:
     from serial.tools import list_ports as tools
 
     found = sorted(tools.comports(), key=lambda info: (info.vid is None, info.device))
-    return [Port(info.device, _description(info.description), info.serial_number) for info in found]
+    return [
+        Port(
+            info.device,
+            _description(info.description),
+            info.serial_number,
+            info.vid,
+            getattr(info, "pid", None),
+            getattr(info, "location", None),
+        )
+        for info in found
+    ]
+
+
+def port_at(path: str, ports: list[Port] | None = None) -> Port | None:
+    """The port that `path` leads to, also by a link; None for what is never listed, as a pty."""
+    where = _place(path)
+    listed = list_ports() if ports is None else ports
+    return next((port for port in listed if where == _place(port.device)), None)
+
+
+def find_again(path: str, was: Port | None) -> str | None:
+    """Path of the device that was `was` (None: not known) when it stood at `path`; None while it is not there.
+
+    Known by its serial number, else by the place it is plugged into, else by `path`; but what stands at `path` now and
+    is known to be something else is left alone: opening a stranger's port may key a transmitter.
+    """
+    ports = list_ports()
+    here = port_at(path, ports)
+    same = [] if was is None else _same(ports, was)
+    if was is not None and same:
+        return max(same, key=lambda port: (port.location == was.location, _interface(port) == _interface(was))).device
+    if here is None:
+        return path if os.name == "posix" and os.path.exists(path) else None
+    return path if was is None or _may_be(here, was) else None
+
+
+def absent(error: BaseException | None) -> bool:
+    """Whether an opening failed because there is nothing at the path."""
+    return getattr(error, "errno", None) in _NOT_THERE
 
 
 def check_device(path: str) -> None:
@@ -58,7 +104,7 @@ def in_words(path: str, error: Exception) -> str:
         return f"{path} may not be opened by you{_remedy(path)}"
     if code in (errno.EBUSY, errno.EAGAIN):
         return f"{path} is busy: {_holder(path)} holds it; close that first"
-    if code in (errno.ENOENT, errno.ENOTDIR, errno.ENXIO, errno.ENODEV):
+    if code in _NOT_THERE:
         return f"{path} is not there; {_plugged()}"
     return f"{path} does not open as a serial port: {error}"
 
@@ -70,6 +116,28 @@ def lost_errors() -> tuple[type[Exception], ...]:
     import termios
 
     return (OSError, termios.error)
+
+
+def _place(path: str) -> str:
+    return os.path.normcase(os.path.realpath(path))
+
+
+def _same(ports: list[Port], was: Port) -> list[Port]:
+    """Ports that are `was` for certain, or stand where it stood and are of its make; several where it has several."""
+    alike = [port for port in ports if was.vid is not None and (port.vid, port.pid) == (was.vid, was.pid)]
+    by_number = [port for port in alike if was.serial_number and port.serial_number == was.serial_number]
+    return by_number or [port for port in alike if was.location and port.location == was.location]
+
+
+def _may_be(here: Port, was: Port) -> bool:
+    """Whether nothing speaks against it: of the same make, and no serial number that differs."""
+    numbers = {here.serial_number, was.serial_number} - {None}
+    return (here.vid, here.pid) == (was.vid, was.pid) and len(numbers) < 2
+
+
+def _interface(port: Port) -> str:
+    """Which of its ports it is, where one device has several."""
+    return (port.location or "").partition(":")[2]
 
 
 def _remedy(path: str) -> str:

@@ -1,4 +1,4 @@
-"""Where bytes come from: a serial port, a file, standard input or the simulated bridge, behind one face.
+"""Where bytes come from: a serial port, the network, a file, standard input or the simulated bridge, behind one face.
 
 One rule: a source waits a quarter of a second at most, never writes, and whatever goes wrong becomes a
 LinkError (FileError for `file:`) that says what came and what to do.
@@ -6,15 +6,16 @@ LinkError (FileError for `file:`) that says what came and what to do.
 
 from __future__ import annotations
 
+import contextlib
 import difflib
 import os
 import select
 import sys
 from collections.abc import Callable
-from typing import TYPE_CHECKING, Protocol
+from typing import TYPE_CHECKING, Protocol, runtime_checkable
 
 from bridgeio.errors import BridgeIOError, FileError, LinkError
-from bridgeio.plugged import Port, check_device, in_words, list_ports, lost_errors
+from bridgeio.plugged import Port, absent, check_device, find_again, in_words, list_ports, lost_errors, port_at
 
 if TYPE_CHECKING:
     import serial
@@ -24,6 +25,7 @@ __all__ = [
     "EndOfSource",
     "FileSource",
     "Port",
+    "Returning",
     "Source",
     "list_ports",
     "open_source",
@@ -54,10 +56,20 @@ class Source(Protocol):
         """Close; harmless where it is closed."""
 
 
-def open_source(text: str, baud: int = 115200) -> Source:
-    """Source that `text` names, unopened: a device path, `file:PATH` (`-`: standard input), `sim:OPTIONS`.
+@runtime_checkable
+class Returning(Source, Protocol):
+    """A source that may come back after it was lost: a link goes on looking for it."""
 
-    LinkError for a scheme that is not known, with a near miss, and for wrong options of `sim:`.
+    def reopen(self) -> bool:
+        """Open it again, under whatever name. False while it is not there, LinkError where it does not open."""
+
+
+def open_source(text: str, baud: int = 115200) -> Source:
+    """Source that `text` names, unopened: a device path, `file:PATH` (`-`: standard input), `sim:OPTIONS`,
+    `socket://HOST:PORT`, `rfc2217://HOST:PORT`.
+
+    LinkError for a scheme that is not known, with a near miss, for an address without host or port, and for wrong
+    options of `sim:`.
     """
     scheme, colon, rest = text.partition(":")
     # A path may hold a colon (/dev/serial/by-path/pci-0000:00:14.0-usb), a scheme never holds a slash.
@@ -66,11 +78,14 @@ def open_source(text: str, baud: int = 115200) -> Source:
     maker = _SCHEMES.get(scheme)
     if maker is None:
         raise LinkError(_unknown_scheme(text, scheme))
-    return maker(rest)
+    return maker(rest, baud)
 
 
 class DeviceSource:
-    """A serial port, 8N1, held by us alone. The path may be anything that is a terminal device, a pty too."""
+    """A serial port, 8N1, held by us alone. The path may be anything that is a terminal device, a pty too.
+
+    What is plugged in there at the first opening is remembered, so that `reopen` knows it again under another name.
+    """
 
     simulated = False
     live = True
@@ -79,25 +94,43 @@ class DeviceSource:
         self.name = path
         self.baud = baud
         self._port: serial.Serial | None = None
+        self._known: Port | None = None
 
     def open(self) -> None:
         """Open the port for us alone. DTR and RTS are raised as on any opening; a board may reset."""
+        self._open(self.name)
+
+    def reopen(self) -> bool:
+        """Open it again where it is now; False while it is not there."""
+        path = find_again(self.name, self._known)
+        if path is None:
+            return False
+        try:
+            self._open(path)
+        except LinkError as error:
+            if absent(error.__cause__):  # on its way out, or not quite in yet
+                return False
+            raise
+        return True
+
+    def _open(self, path: str) -> None:
         import serial
 
-        check_device(self.name)
+        check_device(path)
         port = serial.Serial(timeout=WAIT_S, exclusive=True)
-        port.port = self.name
+        port.port = path
         try:
             port.baudrate = self.baud
             port.open()
             _take_exclusively(port)
         except lost_errors() as error:
             port.close()
-            raise LinkError(in_words(self.name, error)) from error
+            raise LinkError(in_words(path, error)) from error
         except ValueError as error:
             port.close()
-            raise LinkError(f"{self.name} cannot run at {self.baud} baud: {error}") from error
+            raise LinkError(f"{path} cannot run at {self.baud} baud: {error}") from error
         self._port = port
+        self._known = self._known or port_at(path)
 
     def read(self) -> bytes:
         """Whatever has come, after waiting 0.25 s at most. LinkError when the port is gone."""
@@ -108,7 +141,7 @@ class DeviceSource:
         except lost_errors() as error:
             raise LinkError(f"{self.name} is gone: {error}; is it still plugged in?") from error
         if data is None:
-            raise LinkError(f"{self.name} is gone: it was unplugged or closed at its other end")
+            raise LinkError(f"{self.name} is gone: it was unplugged")
         return data
 
     def set_baud(self, baud: int) -> None:
@@ -127,12 +160,12 @@ class DeviceSource:
     def close(self) -> None:
         """Close the port; an unplugged one closes without complaint."""
         port, self._port = self._port, None
-        if port is not None:
-            try:
-                _give_back(port)
-                port.close()
-            except lost_errors():
-                return  # it was gone before: there is nothing left to close
+        if port is None:
+            return
+        # Each on its own: a port that is gone cannot be given back, but its descriptor has to be closed all the same.
+        for end in (lambda: _give_back(port), port.close):
+            with contextlib.suppress(*lost_errors()):
+                end()
 
 
 class FileSource:
@@ -227,18 +260,38 @@ def _beside(path: str) -> str:
 
 
 def _unknown_scheme(text: str, scheme: str) -> str:
-    if scheme in ("socket", "rfc2217"):
-        return f"{text}: sources over the network are not built yet; wanted a device path, file:PATH or sim:"
     near = difflib.get_close_matches(scheme.lower(), _SCHEMES, n=1)
     hint = f"; did you mean {near[0]}:?" if near else ""
-    return f"{text}: there is no kind of source {scheme!r}; wanted a device path, file:PATH or sim:{hint}"
+    wanted = "a device path, file:PATH, socket://HOST:PORT, rfc2217://HOST:PORT or sim:"
+    return f"{text}: there is no kind of source {scheme!r}; wanted {wanted}{hint}"
 
 
-def _simulated(options: str) -> Source:
+def _file(path: str, _baud: int) -> Source:
+    return FileSource(path)
+
+
+def _simulated(options: str, _baud: int) -> Source:
     from bridgeio.simulator.source import SimulatedSource
 
     return SimulatedSource(options)
 
 
-#: scheme -> maker of the source from what stands behind the colon.
-_SCHEMES: dict[str, Callable[[str], Source]] = {"file": FileSource, "sim": _simulated}
+def _socket(rest: str, _baud: int) -> Source:
+    from bridgeio.network import SocketSource
+
+    return SocketSource(f"socket:{rest}")
+
+
+def _rfc2217(rest: str, baud: int) -> Source:
+    from bridgeio.network import RemotePortSource
+
+    return RemotePortSource(f"rfc2217:{rest}", baud)
+
+
+#: scheme -> maker of the source from what stands behind the colon, and the rate [baud].
+_SCHEMES: dict[str, Callable[[str, int], Source]] = {
+    "file": _file,
+    "sim": _simulated,
+    "socket": _socket,
+    "rfc2217": _rfc2217,
+}

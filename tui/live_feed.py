@@ -46,7 +46,8 @@ class LiveFeed:
 
         source, self._receiver, self._desk = self._prepare()
         self._post = post
-        self._link = Link(source, self._receiver, self._on_items, self._on_state)
+        desk = self._desk
+        self._link = Link(source, self._receiver, self._on_items, self._on_state, on_reopened=desk.reopened)
         self._link.start()
 
     def stop(self) -> None:

@@ -225,3 +225,52 @@ def test_batches_are_given_one_at_a_time():
 def test_other_items_are_passed_over():
     """Remarks change nothing and give no readings."""
     assert not list(Desk().take([Remark(0, 0, 1, 0, "\x1b[2J")], 0.0))
+
+
+@pytest.mark.parametrize("device_id", [None, A])
+def test_after_a_loss_counts_only_until_a_nameplate_has_come(device_id):
+    """A board that has sent nameplates, even late ones, is not believed to be the same until it says so again."""
+    desk = Desk([bridge_file("a.toml", device_id)], Reading(frequency_hz=14.2e6))
+    read(desk, tallies([0]), tallies([5000]))  # so long without one that it seemed to send none
+    assert not read(desk, nameplate(A), tallies([5010])).has("uncalibrated").any()
+    desk.reopened()
+    assert read(desk, tallies([5020])).has("uncalibrated").all()
+    assert "waiting for the bridge's nameplate" in desk.note
+    assert read(desk, tallies([20_000])).has("uncalibrated").all()
+    assert not read(desk, nameplate(A), tallies([20_010])).has("uncalibrated").any()
+
+
+def test_other_board_after_a_loss_never_gets_the_old_calibration():
+    """A board of another device id that comes back is counts only, and named."""
+    desk = Desk([bridge_file("a.toml", A)], Reading(frequency_hz=14.2e6))
+    read(desk, nameplate(A), tallies([10]))
+    desk.reopened()
+    assert read(desk, tallies([20]), nameplate(B), tallies([30])).has("uncalibrated").all()
+    assert "board 00000099" in desk.note
+
+
+def test_bridge_without_nameplates_goes_on_at_once_after_a_loss():
+    """A bridge that never sent a nameplate, and one of plain lines, is read by its file right after a loss."""
+    desk = Desk([bridge_file()], Reading(frequency_hz=14.2e6))
+    read(desk, tallies([0]), tallies([5000]))
+    assert not read(desk, tallies([5010])).has("uncalibrated").any()
+    desk.reopened()
+    assert not read(desk, tallies([7])).has("uncalibrated").any()
+
+
+def test_no_average_spans_a_loss():
+    """What waited for an average before a loss is left out: it may be of another board."""
+    desk = Desk([bridge_file()], Reading(frequency_hz=14.2e6, average=2))
+    list(desk.take([Tallies.of(0, [0], 1100.0, 300.0)], 0.0))
+    desk.reopened()
+    batches = list(desk.take([Tallies.of([1, 2, 3], [10, 20, 30], 2200.0, 600.0)], 0.0))
+    assert [batch.readings.forward_counts.tolist() for batch in batches] == [[2200.0]]
+
+
+def test_frequency_told_before_a_loss_is_forgotten():
+    """What the board said of its frequency no longer holds after a loss."""
+    desk = Desk([bridge_file()], Reading(frequency_hz=14.2e6))
+    list(desk.take([conditions(7_050_000)], 0.0))
+    assert desk.frequency_hz == 7_050_000
+    desk.reopened()
+    assert desk.frequency_hz == 14.2e6

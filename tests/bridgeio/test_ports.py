@@ -21,6 +21,7 @@ import bridgeio
 from bridgeio import plugged, ports
 from bridgeio.errors import FileError, LinkError
 from bridgeio.listen import Heard, listen
+from bridgeio.network import RemotePortSource, SocketSource
 from bridgeio.ports import DeviceSource, EndOfSource, FileSource, open_source
 from bridgeio.simulator.source import SimulatedSource
 
@@ -70,6 +71,8 @@ def child(*lines: str, user: int | None = None) -> subprocess.Popen[str]:
         ("file:-", FileSource),
         ("sim:", SimulatedSource),
         ("sim:antenna=dummy", SimulatedSource),
+        ("socket://bridge.local:4000", SocketSource),
+        ("rfc2217://[::1]:4000", RemotePortSource),
     ],
 )
 def test_kind_of_source_by_its_text(text: str, kind: type) -> None:
@@ -84,9 +87,8 @@ def test_kind_of_source_by_its_text(text: str, kind: type) -> None:
     [
         ("simm:x", r"no kind of source 'simm'.*did you mean sim:\?"),
         ("File:x", r"no kind of source 'File'.*did you mean file:\?"),
-        ("ftp:x", r"wanted a device path, file:PATH or sim:$"),
-        ("socket://host:1", "over the network are not built yet"),
-        ("rfc2217://host:1", "over the network are not built yet"),
+        ("ftp:x", r"wanted a device path, file:PATH, socket://HOST:PORT, rfc2217://HOST:PORT or sim:$"),
+        ("sockets://host:1", r"did you mean socket:\?"),
         ("sim:pwer=1", "did you mean power"),
     ],
 )
@@ -148,6 +150,55 @@ def test_device_lost_in_any_way(pty: tuple[FileIO, str], monkeypatch: pytest.Mon
     with pytest.raises(LinkError, match="is gone"):
         source.read()
     source.close()
+
+
+def test_device_that_is_gone_leaves_nothing_open(pty: tuple[FileIO, str]) -> None:
+    """Closing a port that is gone closes its descriptors too."""
+    master, path = pty
+    before = os.listdir("/proc/self/fd")
+    source = DeviceSource(path)
+    source.open()
+    master.close()
+    source.close()
+    assert len(os.listdir("/proc/self/fd")) == len(before) - 1
+
+
+def usb(device: str, serial_number: str | None, location: str | None, pid: int = 0x7523) -> SimpleNamespace:
+    """A port on USB as pyserial lists it."""
+    return SimpleNamespace(
+        device=device, description="n/a", serial_number=serial_number, location=location, vid=0x1A86, pid=pid
+    )
+
+
+WAS = usb("/dev/ttyUSB0", "A1", "1-2:1.0")
+NAMELESS = usb("/dev/ttyUSB0", None, "1-2")
+
+
+@pytest.mark.parametrize(
+    ("was", "plugged_in", "where"),
+    [
+        (WAS, [], None),
+        (WAS, [usb("/dev/ttyUSB0", "A1", "1-2:1.0")], "/dev/ttyUSB0"),
+        (WAS, [usb("/dev/ttyUSB0", "B2", "1-3:1.0"), usb("/dev/ttyUSB1", "A1", "1-4:1.0")], "/dev/ttyUSB1"),
+        (WAS, [usb("/dev/ttyUSB1", "A1", "1-4:1.2"), usb("/dev/ttyUSB2", "A1", "1-4:1.0")], "/dev/ttyUSB2"),
+        (WAS, [usb("/dev/ttyUSB3", "B2", "1-2:1.0")], "/dev/ttyUSB3"),
+        (WAS, [usb("/dev/ttyUSB0", "B2", "1-3:1.0")], None),
+        (WAS, [usb("/dev/ttyUSB0", "A1", "1-2:1.0", pid=0x6001)], None),
+        (NAMELESS, [usb("/dev/ttyUSB0", None, "1-3"), usb("/dev/ttyUSB1", None, "1-2")], "/dev/ttyUSB1"),
+        (NAMELESS, [usb("/dev/ttyUSB0", None, "1-3")], "/dev/ttyUSB0"),
+        (NAMELESS, [usb("/dev/ttyUSB1", None, "1-3")], None),
+        (None, [usb("/dev/ttyUSB0", "A1", "1-2")], "/dev/ttyUSB0"),
+        (None, [usb("/dev/ttyUSB1", "A1", "1-2")], None),
+    ],
+)
+def test_device_is_found_again(
+    monkeypatch: pytest.MonkeyPatch, was: SimpleNamespace | None, plugged_in: list[SimpleNamespace], where: str | None
+) -> None:
+    """It is known by its serial number, else by its place, else by its path; a stranger at its path is left alone."""
+    monkeypatch.setattr(serial_tools, "comports", lambda: [was])
+    known = None if was is None else plugged.port_at("/dev/ttyUSB0")
+    monkeypatch.setattr(serial_tools, "comports", lambda: plugged_in)
+    assert plugged.find_again("/dev/ttyUSB0", known) == where
 
 
 def test_device_not_open() -> None:

@@ -193,10 +193,11 @@ def test_rate_that_is_none(said, value):
 @pytest.mark.parametrize(
     ("source", "code", "answer"),
     [
-        ("simm:", 4, "there is no kind of source 'simm'; wanted a device path, file:PATH or sim:; did you mean sim:?"),
+        ("simm:", 4, "there is no kind of source 'simm'; wanted a device path, file:PATH, socket://HOST:PORT, "
+         "rfc2217://HOST:PORT or sim:; did you mean sim:?"),
         ("sim:pwer=5&mode=x", 4, "sim: there is no option 'pwer'; did you mean power?; mode=x cannot be used; "
          "allowed: tune, key, cw, ssb, sweep, off"),
-        ("socket://host:1", 4, "sources over the network are not built yet; wanted a device path, file:PATH or sim:"),
+        ("socket://localhost:1", 4, "the connection was refused; does anything listen on port 1 of localhost?"),
         ("file:", 3, "file: names no file; wanted file:PATH, or file:- for standard input"),
         ("file:/no/such/log", 3, "/no/such/log cannot be read: No such file or directory"),
         ("file:/", 3, "/ is a folder; wanted a capture or text lines"),

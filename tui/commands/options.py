@@ -8,7 +8,8 @@ import re
 __all__ = ["add_reading_options", "add_source_options", "at_least_one", "positive"]
 
 _SOURCE_HELP = (
-    "device path such as /dev/ttyUSB0, file:PATH (a capture or text lines; file:- is standard input), or sim: "
+    "device path such as /dev/ttyUSB0, socket://HOST:PORT, rfc2217://HOST:PORT, file:PATH (a capture or text lines; "
+    "file:- is standard input), or sim: "
     "(the simulated bridge, the default; options as sim:antenna=dipole&power=50)"
 )
 

@@ -99,7 +99,7 @@ class _Teller:
 
     def __init__(self, rate_hz: float) -> None:
         self._spacing_s, self._due_s = 1.0 / rate_hz, 0.0
-        self._words: str | None = None
+        self._phase: str | None = None
         self._note: str | None = None
         self.ended = False
 
@@ -124,7 +124,7 @@ class _Teller:
 
         if link.phase == "lost":
             raise LinkError(link.words)
-        if link.words != self._words:
-            self._words = link.words
+        if link.phase != self._phase:
+            self._phase = link.phase
             say(link.words)
         self.ended = link.phase == "ended"

@@ -48,7 +48,7 @@ def link_words(snapshot: Snapshot, glyphs: Glyphs) -> Piece:
     if link is None:
         return "starting", "quiet"
     if link.phase != "open":
-        return outside(link.words, not glyphs.dots), "over" if link.phase == "lost" else "word"
+        return outside(link.words, not glyphs.dots), "over" if link.phase in ("lost", "looking") else "word"
     troubles = [f"{count} {word}" for count, word in ((snapshot.lost, "lost"), (snapshot.damaged, "damaged")) if count]
     return f"{snapshot.rate_hz:.0f}/s, {', '.join(troubles) or 'nothing lost'}", "quiet"
 
