@@ -1,0 +1,81 @@
+"""One journal, one writer: a lock file beside the journal, held open for as long as it is written.
+
+One rule: the lock is `flock` on a file of its own, so it goes with its owner however that ends, and no descriptor of
+the journal itself is ever opened and closed beside SQLite's (which would drop SQLite's locks).
+"""
+
+from __future__ import annotations
+
+import fcntl
+import os
+from pathlib import Path
+
+from bridgeio.errors import BridgeIOError, FileError
+
+__all__ = ["JournalHeld", "JournalLock"]
+
+#: A lock file deleted by its owner between our opening and our locking is tried again.
+_TRIES = 50
+
+
+class JournalHeld(BridgeIOError):
+    """Another program, or this one, writes the journal already. The command line leaves with exit code 6."""
+
+
+class JournalLock:
+    """The right to write one journal, from construction to `release`."""
+
+    def __init__(self, journal: Path) -> None:
+        """Take it. JournalHeld, with the owner's pid, where it is taken; FileError where no file can be made."""
+        self.path = journal.with_name(journal.name + "-lock")
+        self._journal = journal
+        for _ in range(_TRIES):
+            self._fd = self._open()
+            if self._take():
+                return
+        raise FileError(f"{self.path}: the lock file comes and goes; is another program deleting it?")
+
+    def release(self) -> None:
+        """Give it back and remove the file."""
+        if self._fd < 0:
+            return
+        if self._is_ours():
+            self.path.unlink(missing_ok=True)
+        os.close(self._fd)
+        self._fd = -1
+
+    def _open(self) -> int:
+        try:
+            return os.open(self.path, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC | os.O_NOFOLLOW, 0o600)
+        except OSError as error:
+            raise FileError(f"{self.path}: no lock file can be made beside the journal: {error.strerror}") from error
+
+    def _take(self) -> bool:
+        """Whether the lock is ours; False where the file was deleted under us."""
+        try:
+            fcntl.flock(self._fd, fcntl.LOCK_EX | fcntl.LOCK_NB)
+        except BlockingIOError as error:
+            owner = os.pread(self._fd, 20, 0).decode("ascii", "replace").strip()
+            os.close(self._fd)
+            raise JournalHeld(
+                f"{self._journal}: is being written by process {owner or 'unknown'}; wanted a journal nobody writes: "
+                "end that process, or give another file"
+            ) from error
+        except OSError as error:
+            os.close(self._fd)
+            raise FileError(f"{self.path}: cannot be locked: {error.strerror}") from error
+        if not self._is_ours():
+            os.close(self._fd)
+            return False
+        os.ftruncate(self._fd, 0)
+        os.pwrite(self._fd, f"{os.getpid()}\n".encode("ascii"), 0)
+        return True
+
+    def _is_ours(self) -> bool:
+        """Whether the path still leads to the file we hold."""
+        held = os.fstat(self._fd)
+        try:
+            found = os.stat(self.path, follow_symlinks=False)
+        except OSError:
+            return False
+        return (held.st_dev, held.st_ino) == (found.st_dev, found.st_ino)
