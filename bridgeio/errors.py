@@ -1,6 +1,6 @@
 """What floor 1 raises. A message says what came, what was wanted and what to do; it may hold outside text, raw."""
 
-__all__ = ["BridgeIOError", "FileError", "LinkError"]
+__all__ = ["BridgeIOError", "FileError", "JournalHeld", "LinkError"]
 
 
 class BridgeIOError(Exception):
@@ -9,6 +9,10 @@ class BridgeIOError(Exception):
 
 class LinkError(BridgeIOError):
     """A port or link could not be opened, or was lost. The command line leaves with exit code 4."""
+
+
+class JournalHeld(BridgeIOError):
+    """Another program, or this one, writes the journal already. The command line leaves with exit code 6."""
 
 
 class FileError(BridgeIOError):

@@ -2,7 +2,7 @@
 
 One rule: nothing heavy is imported here; `--version` and `--help` must answer at once.
 Exit codes: 0 done, 2 usage, 3 a file is wrong, 4 the port or link failed, 5 the data cannot carry what was asked,
-130 stopped by Ctrl-C.
+6 another program holds the journal, 130 stopped by Ctrl-C.
 """
 
 from __future__ import annotations
@@ -22,7 +22,7 @@ from tui.door import say, visible
 
 __all__ = ["main"]
 
-DONE, USAGE, FILE_WRONG, LINK_FAILED, DATA_SHORT, STOPPED = 0, 2, 3, 4, 5, 130
+DONE, USAGE, FILE_WRONG, LINK_FAILED, DATA_SHORT, JOURNAL_HELD, STOPPED = 0, 2, 3, 4, 5, 6, 130
 
 
 def main(argv: Sequence[str] | None = None) -> int:
@@ -105,7 +105,7 @@ def _command_of(words: list[str]) -> tuple[str, list[str]]:
 
 def _answering_for_files(module: object, args: argparse.Namespace) -> int:
     # Imported here: bridgeio's errors cost nothing, but keep the start free of it all the same.
-    from bridgeio.errors import BridgeIOError, FileError, LinkError
+    from bridgeio.errors import BridgeIOError, FileError, JournalHeld, LinkError
 
     try:
         return int(module.run(args))  # type: ignore[attr-defined]
@@ -113,6 +113,8 @@ def _answering_for_files(module: object, args: argparse.Namespace) -> int:
         return _told(error, FILE_WRONG)
     except LinkError as error:
         return _told(error, LINK_FAILED)
+    except JournalHeld as error:
+        return _told(error, JOURNAL_HELD)
     except BridgeIOError as error:  # what is left is a pattern that cannot be used: a word of the command line
         return _told(error, USAGE)
 

@@ -10,16 +10,12 @@ import fcntl
 import os
 from pathlib import Path
 
-from bridgeio.errors import BridgeIOError, FileError
+from bridgeio.errors import FileError, JournalHeld
 
 __all__ = ["JournalHeld", "JournalLock"]
 
 #: A lock file deleted by its owner between our opening and our locking is tried again.
 _TRIES = 50
-
-
-class JournalHeld(BridgeIOError):
-    """Another program, or this one, writes the journal already. The command line leaves with exit code 6."""
 
 
 class JournalLock:

@@ -25,6 +25,7 @@ COMMANDS: dict[str, Command] = {
     for command in (
         Command("watch", "the live screen: tune up by it", "tui.commands.watch"),
         Command("stream", "readings as JSON lines or CSV on standard output", "tui.commands.stream"),
+        Command("keep", "an unattended journal of what the bridge sends", "tui.commands.keep"),
         Command("fit", "fit a bench sheet: from measured steps to a calibrated bridge", "tui.commands.fit"),
         Command("ports", "what is plugged in; with --listen, which port is a bridge", "tui.commands.ports"),
         Command(

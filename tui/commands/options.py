@@ -14,9 +14,10 @@ _SOURCE_HELP = (
 )
 
 
-def add_source_options(parser: argparse.ArgumentParser) -> None:
-    """SOURCE and what belongs to any source."""
-    parser.add_argument("source", nargs="?", default="sim:", metavar="SOURCE", help=_SOURCE_HELP)
+def add_source_options(parser: argparse.ArgumentParser, default: str | None = "sim:") -> None:
+    """SOURCE and what belongs to any source; without a default it must be told."""
+    told = _SOURCE_HELP if default else _SOURCE_HELP.replace(", the default", "")
+    parser.add_argument("source", nargs="?" if default else None, default=default, metavar="SOURCE", help=told)
     parser.add_argument("--baud", type=_rate, default=115200, metavar="RATE", help="rate of a serial port (115200)")
     parser.add_argument(
         "--wire", choices=("auto", "text"), default="auto", help="text: lines only, never binary frames (auto)"
