@@ -33,6 +33,8 @@ __all__ = [
 
 WAIT_S = 0.25
 CHUNK = 65536
+#: A terminal device hands out no more at a time, however much waits behind it.
+FULL_BYTES = 4095
 
 
 class EndOfSource(BridgeIOError):
@@ -244,9 +246,21 @@ def _read_some(port: serial.Serial) -> bytes | None:
     if not select.select([fd], [], [], WAIT_S)[0]:
         return b""
     try:
-        return os.read(fd, CHUNK) or None
+        data = os.read(fd, CHUNK)
     except BlockingIOError:
         return b""
+    return _with_the_rest(fd, data) if len(data) == FULL_BYTES else data or None
+
+
+def _with_the_rest(fd: int, data: bytes) -> bytes:
+    """`data` and what waits behind it, so that a flood is read in few large steps; a fault shows in the next read."""
+    parts = [data]
+    while len(parts[-1]) == FULL_BYTES and len(parts) < CHUNK // FULL_BYTES and select.select([fd], [], [], 0.0)[0]:
+        try:
+            parts.append(os.read(fd, CHUNK))
+        except OSError:
+            break
+    return b"".join(parts)
 
 
 def _beside(path: str) -> str:

@@ -10,7 +10,11 @@ import json
 import math
 from collections.abc import Callable, Iterator
 from datetime import UTC, datetime
+from functools import lru_cache
+from json.encoder import encode_basestring_ascii
 from typing import Any
+
+import numpy as np
 
 from calibration import flags as flag
 
@@ -23,16 +27,18 @@ def rfc3339(time_s: float) -> str | None:
     """RFC 3339 UTC with milliseconds and Z of seconds since 1970; None for NaN or infinity."""
     if not math.isfinite(time_s):
         return None
-    stamp = datetime.fromtimestamp(round(time_s * 1000.0) / 1000.0, UTC)
-    return f"{stamp:%Y-%m-%dT%H:%M:%S}.{stamp.microsecond // 1000:03d}Z"
+    second, ms = divmod(round(time_s * 1000.0), 1000)
+    return f"{_second(second)}.{ms:03d}Z"
 
 
 def json_rows(batch: TimedReadings, bridge: str | None) -> Iterator[str]:
-    """One JSON object a reading, without line ends."""
-    names = list(COLUMNS)
-    for row in _rows(batch, bridge):
-        # All but plain ASCII becomes an escape, so that no name drives a terminal.
-        yield json.dumps(dict(zip(names, row, strict=True)), allow_nan=False, ensure_ascii=True)
+    """One JSON object a reading, without line ends.
+
+    They come by the thousand: keys are written once a batch, and numbers by Python's own shortest form.
+    """
+    form = "{" + ", ".join(f"{json.dumps(name)}: %s" for name in COLUMNS) + "}"
+    columns = [_json_texts(column(batch, bridge)) for column in COLUMNS.values()]
+    return (form % row for row in zip(*columns, strict=True))
 
 
 def csv_header() -> str:
@@ -45,20 +51,40 @@ def csv_rows(batch: TimedReadings, bridge: str | None) -> Iterator[str]:
 
     What cannot be printed is written as an escape, so that a line stays a line and drives no terminal.
     """
-    for row in _rows(batch, bridge):
+    columns = [column(batch, bridge) for column in COLUMNS.values()]
+    for row in zip(*columns, strict=True):
         yield ",".join(_cell(value) for value in row)
 
 
-def _rows(batch: TimedReadings, bridge: str | None) -> Iterator[tuple[Any, ...]]:
-    columns = [column(batch, bridge) for column in COLUMNS.values()]
-    return zip(*columns, strict=True)
+def _json_texts(values: list[Any]) -> list[Any]:
+    """What stands for values in a row: finite numbers as they are, all else as text."""
+    if set(map(type, values)) == {float}:
+        return values
+    return [value if type(value) is float else _json(value) for value in values]
+
+
+def _json(value: Any) -> str:
+    # All but plain ASCII becomes an escape, and DEL, which JSON lets pass: no name drives a terminal.
+    if isinstance(value, str):
+        return encode_basestring_ascii(value).replace("\x7f", "\\u007f")
+    return _repeated(value)
+
+
+@lru_cache(maxsize=256)
+def _repeated(value: Any) -> str:
+    return json.dumps(value, allow_nan=False)
+
+
+@lru_cache(maxsize=8)
+def _second(second: int) -> str:
+    return f"{datetime.fromtimestamp(second, UTC):%Y-%m-%dT%H:%M:%S}"
 
 
 def _cell(value: Any) -> str:
     if value is None:
         return ""
     if not isinstance(value, str):
-        return " ".join(value) if isinstance(value, list) else str(value)
+        return " ".join(value) if isinstance(value, tuple) else str(value)
     text = "".join(char if char.isprintable() else char.encode("unicode_escape").decode("ascii") for char in value)
     if text.startswith(_FORMULA):
         text = f"'{text}"
@@ -69,12 +95,18 @@ def _cell(value: Any) -> str:
 _FORMULA = ("=", "+", "-", "@", "\uff1d", "\uff0b", "\uff0d", "\uff20")
 
 
+_names = lru_cache(maxsize=256)(flag.names)
+
 Column = Callable[[TimedReadings, str | None], list[Any]]
 
 
 def _of(name: str) -> Column:
     def column(batch: TimedReadings, _bridge: str | None) -> list[Any]:
-        return [value if math.isfinite(value) else None for value in getattr(batch.readings, name).tolist()]
+        found = getattr(batch.readings, name)
+        values: list[Any] = found.tolist()
+        if np.isfinite(found).all():
+            return values
+        return [value if math.isfinite(value) else None for value in values]
 
     return column
 
@@ -92,7 +124,7 @@ COLUMNS: dict[str, Column] = {
     },
     "averaged": lambda batch, _bridge: batch.averaged.tolist(),
     "bridge": lambda batch, bridge: [bridge] * len(batch.readings),
-    "flags": lambda batch, _bridge: [list(flag.names(bits)) for bits in batch.readings.flags],
+    "flags": lambda batch, _bridge: [_names(bits) for bits in batch.readings.flags.tolist()],
 }
 
 #: format -> rows of it.

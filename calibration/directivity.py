@@ -90,10 +90,9 @@ def rho_interval(
     loads behind line have identified it, else -1, the worst.
     """
     low_m, high_m, s, d, c, psi = np.broadcast_arrays(ratio_low, ratio_high, noise, d, c, angle_cosine)
-    low = _lower_end(np.asarray(low_m, dtype=float), s, d, c, psi)
-    # |d| is a limit and the truth may leak less: where little is measured less leakage allows a larger rho.
-    high = _upper_end(np.asarray(high_m, dtype=float), s, np.stack([d, 0.0 * d]), c, psi)
-    return low, np.asarray(high.max(axis=0))
+    # |d| is a limit and the truth may leak less: where little is measured less leakage allows a larger upper end.
+    ends = _ends(np.stack([low_m, high_m, high_m]), s, np.stack([d, d, 0.0 * d]), c, psi)
+    return ends[0], np.asarray(ends[1:].max(axis=0))
 
 
 def _swing(m2: Array, d: Array, c: Array, psi: Array) -> Array:
@@ -102,39 +101,32 @@ def _swing(m2: Array, d: Array, c: Array, psi: Array) -> Array:
     return np.asarray(np.sqrt(np.maximum(d * d + seen * seen - 2.0 * d * seen * psi, 0.0)))
 
 
-def _lower_end(m2: Array, s: Array, d: Array, c: Array, psi: Array) -> Array:
-    """The rho where M is the upper quantile; 0 where already rho = 0 explains it (Newton, from the right)."""
-    a, e, excess = 1.0 - m2 * c * c, _swing(m2, d, c, psi), m2 - d * d
-    possible = excess > NORMAL_DEVIATE * s
-    with np.errstate(invalid="ignore", divide="ignore"):
-        rho = np.where(possible, np.sqrt(np.maximum(excess / np.maximum(a, 1e-12), 0.0)), 0.0)
-        for _ in range(_MOST_STEPS):
-            quantile, slope = spread_quantile(2.0 * rho * e, s)
-            gap = excess - rho * rho * a - quantile
-            before, rho = rho, np.maximum(rho + gap / (2.0 * rho * a + 2.0 * e * slope), 0.0)
-            if _settled(before, rho, possible):
-                break
-    return np.where(np.isnan(m2), np.nan, np.where(possible, rho, 0.0))
+def _ends(m2: Array, s: Array, d: Array, c: Array, psi: Array) -> Array:
+    """Lower ends (first row) and upper ends (the others) of rho, by Newton's method for all at once.
 
-
-def _upper_end(m2: Array, s: Array, d: Array, c: Array, psi: Array) -> Array:
-    """The largest rho where M is the lower quantile; infinite where the forward leak alone can explain M."""
-    unbounded = np.isinf(m2)
+    The lower end is the rho where M is the upper quantile, 0 where already rho = 0 explains it; the upper one the
+    largest rho where M is the lower quantile, infinite where the forward leak alone can explain M.
+    """
+    side = np.where(np.arange(len(m2)) == 0, 1.0, -1.0).reshape(-1, *[1] * (m2.ndim - 1))
+    lower, unbounded, unknown = side > 0.0, np.isinf(m2), np.isnan(m2)
     m2 = np.where(unbounded, 0.0, m2)
     a, e, excess = 1.0 - m2 * c * c, _swing(m2, d, c, psi), m2 - d * d
-    bounded = (a > 0.0) & ~unbounded
+    within = np.where(lower, excess > NORMAL_DEVIATE * s, (a > 0.0) & ~unbounded)
     a = np.maximum(a, 1e-12)
-    start = (e + np.sqrt(np.maximum(e * e + a * (excess + NORMAL_DEVIATE * s), 0.0))) / a
-    rho = start
+    # The lower end starts from no swing and no noise, the upper one from all of both: each lies beyond its root.
+    swing, noise = np.where(lower, 0.0, e), np.where(lower, 0.0, NORMAL_DEVIATE * s)
+    start = (swing + np.sqrt(np.maximum(swing * swing + a * (excess + noise), 0.0))) / a
+    rho = np.where(within, start, 0.0)
     for _ in range(_MOST_STEPS):
         quantile, slope = spread_quantile(2.0 * rho * e, s)
-        gap = excess - rho * rho * a + quantile
-        fall = 2.0 * rho * a - 2.0 * e * slope
+        gap = excess - rho * rho * a - side * quantile
+        fall = 2.0 * (rho * a + side * e * slope)
         step = np.where(fall > 0.0, gap / np.where(fall > 0.0, fall, 1.0), 0.0)
         before, rho = rho, np.minimum(np.maximum(rho + step, 0.0), start)
-        if _settled(before, rho, bounded):
+        if _settled(before, rho, within):
             break
-    return np.where(np.isnan(m2), np.nan, np.where(bounded, rho, np.inf))
+    beyond = np.where(lower, 0.0, np.inf)
+    return np.where(unknown, np.nan, np.where(within, rho, beyond))
 
 
 def _settled(before: Array, after: Array, wanted: npt.NDArray[np.bool_]) -> bool:

@@ -5,6 +5,7 @@ One rule: between codes the table is a straight line, and outside the codes it s
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
@@ -12,7 +13,7 @@ import numpy.typing as npt
 
 from .laws import Law
 
-__all__ = ["LawTable"]
+__all__ = ["LawTable", "LookUp"]
 
 Array = npt.NDArray[np.float64]
 
@@ -22,8 +23,17 @@ _MOST_CODES = 65535
 _SENSITIVITY_KNOTS = 4096
 
 
+@dataclass(frozen=True, slots=True)
+class LookUp:
+    """A law at n counts: its square [law units], d square/d counts, and d square/d law parameters [n, p]."""
+
+    square: Array
+    slope: Array
+    sensitivity: Array
+
+
 class LawTable:
-    """Look-up of a law's square, and where intervals are asked for, of its slope and sensitivity."""
+    """Look-up of a law's square, and for intervals of its slope and sensitivity."""
 
     def __init__(self, law: Law, full_scale: int) -> None:
         """Tabulate `law` over 0..full_scale [counts]."""
@@ -37,23 +47,19 @@ class LawTable:
 
     def square(self, counts: Array) -> Array:
         """The law's square [law units] at `counts`, any shape; NaN in gives NaN out."""
-        place, part = self._place(counts)
+        place, part, _ = self._place(counts)
         left = self._square.take(place)
         return np.asarray(left + part * (self._square.take(place + 1) - left))
 
-    def slope(self, counts: Array) -> Array:
-        """d square/d counts at `counts`, any shape."""
-        place, _ = self._place(counts)
-        rise = self._square.take(place + 1) - self._square.take(place)
-        return np.asarray(rise / (self._knots.take(place + 1) - self._knots.take(place)))
-
-    def sensitivity(self, counts: Array) -> Array:
-        """d square/d law parameters at `counts`, shape (*counts, p)."""
-        place, part = self._place(counts)
+    def look_up(self, counts: Array) -> LookUp:
+        """All there is at `counts`, any shape; NaN in gives NaN out."""
+        place, part, width = self._place(counts)
+        left = self._square.take(place)
+        rise = self._square.take(place + 1) - left
         at, beyond = np.divmod(place, self._stride)
-        left = self._sensitivity.take(at, axis=0)
-        part = (part + beyond) / self._stride
-        return np.asarray(left + part[..., None] * (self._sensitivity.take(at + 1, axis=0) - left))
+        low = self._sensitivity.take(at, axis=0)
+        step = ((part + beyond) / self._stride)[..., None] * (self._sensitivity.take(at + 1, axis=0) - low)
+        return LookUp(np.asarray(left + part * rise), np.asarray(rise / width), np.asarray(low + step))
 
     @cached_property
     def _sensitivity(self) -> Array:
@@ -64,11 +70,14 @@ class LawTable:
         """Counts of the knots at `place`."""
         return np.square(place * self._root_step) if self._even_root else place.astype(np.float64)
 
-    def _place(self, counts: Array) -> tuple[npt.NDArray[np.intp], Array]:
-        n = np.clip(counts, 0.0, self._knots[-1])
-        n = np.where(np.isnan(n), 0.0, n)
-        position = np.sqrt(n) / self._root_step if self._even_root else n
+    def _place(self, counts: Array) -> tuple[npt.NDArray[np.intp], Array, Array | float]:
+        """The knot below, how far to the next one (0 to 1), and the way between them [counts]."""
+        inside = np.minimum(np.maximum(counts, 0.0), self._knots[-1])
+        known = np.fmax(inside, 0.0)
+        position = np.sqrt(known) / self._root_step if self._even_root else known
         place = np.minimum(position.astype(np.intp), len(self._knots) - 2)
+        if not self._even_root:
+            return place, inside - place, 1.0
         left = self._knots.take(place)
-        part = (n - left) / (self._knots.take(place + 1) - left)
-        return place, np.where(np.isnan(counts), np.nan, part)
+        width = self._knots.take(place + 1) - left
+        return place, (inside - left) / width, width

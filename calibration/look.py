@@ -104,14 +104,15 @@ class Look:
         gain_r = bands.gain_reflected_squared[at] * self._gain_factors[1]
         sds = self._counting_sds(bands.covariance[at], samples)
         edges = self._edges(nf, nr, place[0] >= 0, sds, wire)
-        forward_w = np.where(edges.known, self._tables[0].square(nf) / gain_f, np.nan)
-        reflected_w = np.where(edges.known, self._tables[1].square(nr) / gain_r, np.nan)
+        forward, reflected = self._tables[0].look_up(nf), self._tables[1].look_up(nr)
+        forward_w = np.where(edges.known, forward.square / gain_f, np.nan)
+        reflected_w = np.where(edges.known, reflected.square / gain_r, np.nan)
         with np.errstate(divide="ignore", invalid="ignore"):
             ratio = np.where(edges.silent, np.nan, reflected_w / forward_w)
         power = np.where(edges.silent, 0.0, forward_w.mean(axis=0))
-        slopes = self._tables[0].slope(nf) / gain_f, self._tables[1].slope(nr) / gain_r
-        noises = slopes[0] * sds[0], slopes[1] * sds[1]
-        fixed = self._fixed_limits(nf, nr, (gain_f, gain_r), bands.covariance[at], forward_w, ratio)
+        noises = forward.slope / gain_f * sds[0], reflected.slope / gain_r * sds[1]
+        sensitivities = forward.sensitivity / gain_f[..., None], reflected.sensitivity / gain_r[..., None]
+        fixed = self._fixed_limits(nf, nr, sensitivities, bands.covariance[at], forward_w, ratio)
         terms = self._terms(edges, bands.limits[:, at], forward_w, ratio, noises, fixed)
         return Taken(ratio, power, edges.bits, edges.below | edges.reflected_clipped, _beyond_open(terms), terms)
 
@@ -167,11 +168,13 @@ class Look:
         )
 
     def _fixed_limits(
-        self, nf: Array, nr: Array, gains: tuple[Array, Array], covariance: Array, forward_w: Array, ratio: Array
+        self, nf: Array, nr: Array, by_law: tuple[Array, Array], covariance: Array, forward_w: Array, ratio: Array
     ) -> tuple[Array, Array]:
-        """95 % limits of what is fixed: of forward power [W] (law, gain, reference) and of M (laws, balance)."""
-        forward = self._tables[0].sensitivity(nf) / gains[0][..., None]
-        reflected = self._tables[1].sensitivity(nr) / gains[1][..., None]
+        """95 % limits of what is fixed: of forward power [W] (law, gain, reference) and of M (laws, balance).
+
+        by_law: powers' derivatives by the laws' parameters [k, n, p].
+        """
+        forward, reflected = by_law
         with np.errstate(divide="ignore", invalid="ignore"):
             # d W/d ln gain = -2 W; d M = (d R - M d F)/F.
             by_forward = np.concatenate([-2.0 * forward_w[..., None], forward], axis=-1)

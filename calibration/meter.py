@@ -38,6 +38,7 @@ class Meter:
         """Tabulate the laws of `bridge` over its converter's codes."""
         self.bridge = bridge
         self._look = Look(bridge)
+        self._calibrated = BandTerms.of(bridge.bands)
         # A bounded memory of laws at other temperatures and zeros: both wander slowly while a bridge is in use.
         self._look_at = lru_cache(maxsize=32)(self._make_look)
 
@@ -68,12 +69,10 @@ class Meter:
         nf, nr = (np.atleast_1d(np.asarray(counts, dtype=float)) for counts in (forward, reflected))
         f = np.broadcast_to(np.asarray(np.nan if frequency_hz is None else frequency_hz, dtype=float), nf.shape)
         bands, place, bits = self._bands(f, np.ndim(np.asarray(frequency_hz)) == 0)
+        band_terms = self._calibrated if len(bands) == len(self.bridge.bands) else BandTerms.of(bands)
         n = np.asarray(samples, dtype=float)
         wire = np.asarray(wire_flags)
-        looks = [
-            look.take(nf, nr, BandTerms.of(bands), place, n, wire)
-            for look in self._looks(temperature_c, zero, moved_zero)
-        ]
+        looks = [look.take(nf, nr, band_terms, place, n, wire) for look in self._looks(temperature_c, zero, moved_zero)]
         first = looks[0]
         bits = bits | first.bits | _outside_bits(nf.shape, checked, simulated)
         if temperature_c is None and self.bridge.temperature_span_c > _BENCH_SPAN_K:
@@ -83,7 +82,7 @@ class Meter:
         beyond = first.beyond_open
         before = np.concatenate([[after is not None and bool(after.beyond_open[-1])], beyond[:-1]])
         bits = bits | _bits("swapped", beyond & before)
-        leaks = BandTerms.of(bands).estimates[:, place]
+        leaks = band_terms.estimates[:, place]
         rho = rho_estimate(first.ratio, *leaks).mean(axis=0)
         shown = np.where(first.blank_rho, np.nan, rho)
         power = first.power_w

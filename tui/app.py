@@ -31,7 +31,8 @@ from .trail import Trail
 
 __all__ = ["BridgewrightApp", "stale_after_s"]
 
-_PAINTS_PER_READING = 1.5  # the cap on paints lies above the feed's rate, so that jitter delays none
+_PAINTS_PER_READING = 1.5  # the cap on paints lies above the feed's rate, so that jitter delays none,
+_LASTING_PAINTS = 1.1  # and in the long run just above it, so that a faster feed costs hardly more
 _TICK_S = 0.25  # clocks and the ageing trail move on without readings
 _FIRST_READING_S = 3.0  # before the first reading, silence is not yet a fault: boards reset when the port opens
 _STALE_S, _STALE_PERIODS = 0.25, 3.0
@@ -79,7 +80,8 @@ class BridgewrightApp(App[None]):
         self._first_screen = screen
         self.glyphs = glyphs(ascii)
         self.limits = limits or Limits()
-        self.mailbox = Mailbox(self._wake, 1.0 / (_PAINTS_PER_READING * rate_hz), clock)
+        least_s, mean_s = (1.0 / (paints * rate_hz) for paints in (_PAINTS_PER_READING, _LASTING_PAINTS))
+        self.mailbox = Mailbox(self._wake, least_s, clock, mean_s)
         self._snapshot = Snapshot()
         self._alarm, self._key_clock, self._trail = Alarm(self.limits), KeyClock(), Trail()
         self._sampler = Sampler()
@@ -96,6 +98,7 @@ class BridgewrightApp(App[None]):
         """The screen asked for lies at the bottom of the stack."""
         screen = SCREENS[self._first_screen]()
         screen.glyphs, screen.palette = self.glyphs, palette(self._color, dark=True)
+        screen.first = self._view()
         return screen
 
     def on_mount(self) -> None:
@@ -105,11 +108,12 @@ class BridgewrightApp(App[None]):
         self.theme = _THEMES[0 if self._color else 2].name
 
     def on_ready(self) -> None:
-        """The first picture stands: start the feed and the clocks."""
+        """Paint the first picture; only when it stands start the feed, whose imports would delay it."""
         self._heard_s = self._clock()
         self._paint()
         self.set_interval(_TICK_S, self._tick)
-        threading.Thread(target=self._start_feed, name="feed-start", daemon=True).start()
+        feed = threading.Thread(target=self._start_feed, name="feed-start", daemon=True)
+        self.call_after_refresh(feed.start)
 
     async def run_async(self, **options: Any) -> None:
         """Run until the end; the feed is stopped when the terminal is already back to normal.
@@ -189,10 +193,11 @@ class BridgewrightApp(App[None]):
         before, self._snapshot = self._snapshot, delivery.snapshot
         if _moved(before.frequency_hz, delivery.snapshot.frequency_hz):
             self._trail.forget()
-        for at_s, reading in delivery.readings:
-            self._last = self._sampler.take(at_s, reading)
-            for listener in (self._alarm, self._key_clock, self._trail):
-                listener.feed(self._last)
+        for at_s, batch in delivery.readings:
+            for sample in self._sampler.samples(at_s, batch):
+                self._last = sample
+                for listener in (self._alarm, self._key_clock, self._trail):
+                    listener.feed(sample)
         if delivery.readings and self._last is not None:
             self._heard_s = self._last.at_s
             if not self._watching:

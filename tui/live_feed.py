@@ -1,6 +1,7 @@
 """The feed of the live screens: source, receiver and desk, joined in the link's own thread.
 
-One rule: the screen hears of each reading by one narrow call, `post`, from the reader thread, which never waits.
+One rule: the screen hears of each batch of readings by one narrow call, `post`, from the reader thread, which never
+waits.
 """
 
 from __future__ import annotations
@@ -37,8 +38,10 @@ class LiveFeed:
         self._receiver: Receiver | None = None
         self._post: Callable[[Snapshot], None] = lambda snapshot: None
         self._reading: Readings | None = None
+        self._batch: Readings | None = None
         self._arrival_s = 0.0
         self._arrivals: deque[tuple[float, int]] = deque()
+        self._arrived = 0  # readings in `_arrivals`
 
     def start(self, post: Callable[[Snapshot], None]) -> None:
         """Open the source and begin; `post` is called from the reader thread."""
@@ -71,25 +74,26 @@ class LiveFeed:
         now_s = time.monotonic()
         for batch in self._desk.take(items, arrival_s):
             self._count(now_s, len(batch.readings))
-            for place in range(len(batch.readings)):
-                self._reading, self._arrival_s = batch.readings[place], arrival_s
-                self._send()
+            self._batch, self._reading, self._arrival_s = batch.readings, batch.readings[-1], arrival_s
+            self._send()
 
     def _on_state(self, state: LinkState) -> None:
         self._send(state)
 
     def _count(self, now_s: float, readings: int) -> None:
         self._arrivals.append((now_s, readings))
+        self._arrived += readings
         while self._arrivals[0][0] < now_s - _RATE_WINDOW_S:
-            self._arrivals.popleft()
+            self._arrived -= self._arrivals.popleft()[1]
 
     @property
     def _rate_hz(self) -> float:
+        """The first batch only begins the time in which the others came."""
         if len(self._arrivals) < 2:
             return 0.0
-        span_s = self._arrivals[-1][0] - self._arrivals[0][0]
-        later = sum(count for _, count in list(self._arrivals)[1:])
-        return later / span_s if span_s > 0.0 else 0.0
+        begun_s, first = self._arrivals[0]
+        span_s = self._arrivals[-1][0] - begun_s
+        return (self._arrived - first) / span_s if span_s > 0.0 else 0.0
 
     def _send(self, state: LinkState | None = None) -> None:
         assert self._desk is not None
@@ -100,6 +104,7 @@ class LiveFeed:
         self._post(
             Snapshot(
                 reading=self._reading,
+                batch=self._batch,
                 arrival_s=self._arrival_s,
                 rate_hz=self._rate_hz,
                 lost=counters.lost,

@@ -25,12 +25,14 @@ class Snapshot:
     """All that is known at one moment, left in the mailbox by the reader thread.
 
     reading: the newest, of length one; a new object is a new reading, the same object is news of the link alone.
-    arrival_s: when that reading came [s since 1970]. rate_hz: frames a second as they come. lost, damaged: frames
-    since the port opened, lost "at least". period_ms: nominal spacing [ms], 0 where irregular. note: a sentence
-    for people, such as both full scales where they disagree. Texts are raw: the screen makes them visible.
+    batch: all readings that came together with it, itself the last; None where it came alone. arrival_s: when they
+    came [s since 1970]. rate_hz: frames a second as they come. lost, damaged: frames since the port opened, lost "at
+    least". period_ms: nominal spacing [ms], 0 where irregular. note: a sentence for people, such as both full scales
+    where they disagree. Texts are raw: the screen makes them visible.
     """
 
     reading: Readings | None = None
+    batch: Readings | None = None
     arrival_s: float = 0.0
     rate_hz: float = 0.0
     lost: int = 0

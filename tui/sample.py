@@ -6,7 +6,9 @@ One rule: no interval is asked for here, so that readings which are never shown 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
+from functools import lru_cache
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
@@ -63,17 +65,17 @@ class Sampler:
         self._crest_w = self._last_w = 0.0
         self._carrier_s = -math.inf
 
-    def take(self, at_s: float, reading: Readings) -> Sample:
-        """Sample of a reading of length one that arrived at `at_s` [s, steady clock]."""
-        from calibration.flags import names  # numpy comes with it: only once there is a reading
+    def samples(self, at_s: float, readings: Readings) -> Iterator[Sample]:
+        """A sample of each reading, in order; they arrived together at `at_s` [s, steady clock]."""
+        columns = readings.rho.tolist(), readings.forward_w.tolist(), readings.flags.tolist()
+        for rho, forward_w, bits in zip(*columns, strict=True):
+            plain = Sample(at_s, rho, forward_w, _names(bits))
+            yield self._weighed(plain) if plain.carrier else plain
 
-        flags = frozenset(names(reading.flags[0]))
-        plain = Sample(at_s, float(reading.rho[0]), float(reading.forward_w[0]), flags)
-        if not plain.carrier:
-            return plain
-        self._follow(at_s, plain.forward_w)
-        weak = plain.forward_w <= _CREST_PART * self._crest_w
-        return Sample(at_s, plain.rho, plain.forward_w, flags, weak)
+    def _weighed(self, sample: Sample) -> Sample:
+        """The sample of a carrier, marked where it is weak."""
+        self._follow(sample.at_s, sample.forward_w)
+        return replace(sample, weak=True) if sample.forward_w <= _CREST_PART * self._crest_w else sample
 
     def _follow(self, at_s: float, forward_w: float) -> None:
         """Raise the crest to what two neighbouring readings both reach: a single wild one must not mute the rest."""
@@ -81,3 +83,10 @@ class Sampler:
             self._crest_w = self._last_w = 0.0
         self._crest_w = max(self._crest_w, min(forward_w, self._last_w))
         self._last_w, self._carrier_s = forward_w, at_s
+
+
+@lru_cache(maxsize=256)
+def _names(bits: int) -> frozenset[str]:
+    from calibration.flags import names  # numpy comes with it: only once there is a reading
+
+    return frozenset(names(bits))

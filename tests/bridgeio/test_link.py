@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import os
 import threading
 import time
@@ -14,7 +15,7 @@ import pytest
 from bridgeio.errors import LinkError
 from bridgeio.frames import Item, Tallies
 from bridgeio.framing import pack
-from bridgeio.link import PHASES, Link, LinkState
+from bridgeio.link import PHASES, REST_S, Link, LinkState, rest_s
 from bridgeio.ports import DeviceSource, EndOfSource, Source, open_source
 from bridgeio.receiver import Receiver
 
@@ -115,6 +116,35 @@ def test_frames_pass_from_port_to_listener(pty: tuple[FileIO, str]) -> None:
     assert before_s <= listener.arrivals[0] <= time.time()
     assert link.state == LinkState("open", f"{path} is open")
     link.stop()
+
+
+def test_fast_bridge_is_read_in_few_steps() -> None:
+    """After frames the reader rests while more gather; half a frame is no reason to rest."""
+    read_s: list[float] = []
+
+    class Timed(Scripted):
+        def read(self) -> bytes:
+            read_s.append(time.monotonic())
+            return super().read()
+
+    whole = frames(3)
+    listener = Listener()
+    link = listener.link(Timed(whole, whole[:10], whole[10:]))
+    until(lambda: len(read_s) > 3)
+    link.stop()
+    assert read_s[1] - read_s[0] >= REST_S
+    assert read_s[3] - read_s[2] >= REST_S
+    assert min(after - before for before, after in itertools.pairwise(read_s[:4])) < REST_S
+
+
+def test_rest_is_for_what_gathers() -> None:
+    """A flood is read on at once, as a port holds little, and so is a file."""
+    file = Scripted()
+    file.live = False
+    assert rest_s(Scripted(), bytes(15)) == REST_S
+    assert rest_s(Scripted(), bytes(15), 0.1) == 0.1
+    assert rest_s(Scripted(), bytes(4095)) == 0.0
+    assert rest_s(file, bytes(15)) == 0.0
 
 
 def test_port_unplugged_is_looked_for_in_words(pty: tuple[FileIO, str]) -> None:

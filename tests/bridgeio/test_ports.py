@@ -8,6 +8,7 @@ import shutil
 import subprocess
 import sys
 import termios
+import threading
 import tty
 from collections.abc import Callable, Iterator
 from io import FileIO
@@ -115,6 +116,29 @@ def test_device_reads_what_comes(pty: tuple[FileIO, str]) -> None:
         got += piece
     assert got == sent
     source.close()
+
+
+def test_device_flooded(pty: tuple[FileIO, str]) -> None:
+    """A flood larger than any buffer of a terminal comes through whole and in order, however large the reads."""
+    master, path = pty
+    source = DeviceSource(path)
+    source.open()
+    sent = b"".join(n.to_bytes(4, "little") for n in range(60_000))
+    writer = threading.Thread(target=_write_all, args=(master, sent), daemon=True)
+    writer.start()
+    got = b""
+    while len(got) < len(sent):
+        piece = source.read()
+        assert piece
+        got += piece
+    writer.join(5.0)
+    assert got == sent
+    source.close()
+
+
+def _write_all(file: FileIO, data: bytes) -> None:
+    while data:
+        data = data[file.write(data) or 0 :]
 
 
 def test_device_without_bytes(pty: tuple[FileIO, str]) -> None:

@@ -62,6 +62,12 @@ def reading(rho=0.1736, *flags, forward=49.4, half=0.025, power_pct=5.0, columns
     return SimpleNamespace(flags=np.array([bits], dtype=np.uint32), **{k: np.array([v]) for k, v in values.items()})
 
 
+def together(*made):
+    """Readings that came in one batch."""
+    names = ("flags", "rho", "forward_w")
+    return SimpleNamespace(**{name: np.concatenate([getattr(each, name) for each in made]) for name in names})
+
+
 def no_carrier():
     """Nothing but the dark counts."""
     gone = {name: math.nan for name in _COLUMNS if name.startswith(("rho", "swr", "reflected_", "net_"))}

@@ -11,7 +11,7 @@ from textual.screen import Screen
 from textual.widgets import Input
 
 from calibration.flags import FLAGS
-from tests.tui.fakes import HandFeed, below, no_carrier, picture, reading, snapshot, uncalibrated, until
+from tests.tui.fakes import HandFeed, below, no_carrier, picture, reading, snapshot, together, uncalibrated, until
 from tui.alarm import Limits
 from tui.app import BridgewrightApp, stale_after_s
 from tui.screens.help import Help
@@ -151,6 +151,25 @@ def test_feed_starts_after_the_first_paint():
     check(look())
 
 
+def test_first_picture_is_drawn_before_anything_is_laid_out():
+    """The screen comes with its words when it is mounted: no blank picture first, no second one to wait for."""
+
+    async def look():
+        seen = []
+
+        class Noted(BridgewrightApp):
+            def on_ready(self):
+                seen.append({rows.id: rows.text for rows in self.screen.query(Rows)})
+
+        app = Noted(HandFeed(), ascii=True)
+        async with app.run_test(size=(80, 24)) as pilot:
+            await until(pilot, lambda: seen)
+        assert "no reading yet" in seen[0]["head"]
+        assert seen[0]["keys"].endswith("q quit")
+
+    check(look())
+
+
 def test_feed_that_cannot_start_ends_the_program_with_its_error():
     """What start raises comes out of run, for the command line to put into words."""
 
@@ -240,6 +259,20 @@ def test_alarm_rings_once_for_two_frames_over_the_limit(monkeypatch):
             assert "OVER" not in text
             assert bells == []
             await shown(pilot, feed, "!! OVER THE LIMIT: SWR 2 !!", reading(0.4), reading(0.4), reading(0.41))
+            assert bells == [1]
+
+    check(look())
+
+
+def test_alarm_sees_readings_of_a_batch_that_are_never_shown(monkeypatch):
+    """Two frames over the limit ring, though they came in one batch whose last reading alone is shown."""
+
+    async def look():
+        bells, well, bad = [], reading(), reading(0.5)
+        async with running() as (app, feed, pilot):
+            monkeypatch.setattr(app, "bell", lambda: bells.append(1))
+            lines = await shown(pilot, feed, "!! OVER", well, batch=together(well, bad, bad, well))
+            assert "1.35-1.50" in "\n".join(lines)
             assert bells == [1]
 
     check(look())

@@ -1,8 +1,11 @@
 """The mailbox: woken once, nothing lost, painted at once or at the deadline."""
 
+import itertools
 import threading
 
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 
 from tests.tui.fakes import reading, snapshot
 from tui.mailbox import Mailbox
@@ -103,6 +106,49 @@ def test_wait_right_after_a_paint_is_the_rest_of_the_interval(box, clock):
     box.take()
     clock.now_s += 0.010
     assert box.wait_s() == pytest.approx(0.023)
+
+
+def paints(box, clock, arrivals_s):
+    """When a screen paints that does as it is told, while readings come at these moments."""
+    painted_s = []
+    for at_s in arrivals_s:
+        due_s = clock.now_s + box.wait_s()
+        if box._pending and due_s <= at_s:
+            clock.now_s = due_s
+            box.take()
+            painted_s.append(due_s)
+        clock.now_s = at_s
+        box.put(snapshot(Numbered(at_s)))
+        if box.wait_s() == 0.0:
+            box.take()
+            painted_s.append(at_s)
+    return painted_s
+
+
+def test_wait_under_a_flood_keeps_to_the_mean_interval(clock):
+    """A thousand readings a second are painted hardly more often than the twenty a screen is made for."""
+    box = Mailbox(lambda: None, 1 / 30, clock, mean_interval_s=1 / 22)
+    painted_s = paints(box, clock, [100.0 + n / 1000 for n in range(10_000)])
+    assert len(painted_s) == pytest.approx(220, abs=2)
+    assert min(after - before for before, after in itertools.pairwise(painted_s)) >= 1 / 30 - 1e-9
+
+
+@given(st.lists(st.floats(-0.005, 0.005), min_size=100, max_size=100))
+def test_wait_a_jittered_feed_of_its_own_rate_is_painted_as_it_comes(jitter_s):
+    """Twenty readings a second, each up to 5 ms early or late, never wait for a deadline."""
+    clock = Clock()
+    box = Mailbox(lambda: None, 1 / 30, clock, mean_interval_s=1 / 22)
+    arrivals_s = [100.0 + n / 20 + late_s for n, late_s in enumerate(jitter_s)]
+    assert paints(box, clock, arrivals_s) == arrivals_s
+
+
+def test_take_of_a_batch_gives_all_its_readings(box):
+    """What came together is handed on together, though only its last reading is shown."""
+    newest, batch = reading(), [reading(), reading()]
+    box.put(snapshot(newest, batch=batch))
+    delivery = box.take()
+    assert delivery.snapshot.reading is newest
+    assert [each for _, each in delivery.readings] == [batch]
 
 
 def test_put_while_the_screen_hangs_is_bounded(box):

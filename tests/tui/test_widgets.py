@@ -1,6 +1,7 @@
 """Drawing as pure functions: the scale, the trail, the ribbon, the figures, the quiet lines."""
 
 import itertools
+import math
 from types import SimpleNamespace
 
 import pytest
@@ -144,6 +145,15 @@ def test_draw_trail_without_gaps_is_one_unbroken_thread(rhos, width, height):
         for upper, lower in itertools.pairwise(drawn):
             assert min(lower) <= max(upper) + 1
             assert max(lower) >= min(upper) - 1
+
+
+def test_draw_trail_moves_its_old_part_in_steps():
+    """Within a fifth of a second only the newest seconds move: rows that need no repaint cost nothing."""
+    rhos = [0.5 + 0.4 * math.sin(n / 9) for n in range(1200)]
+    pictures = [draw_trail(thread(rhos), 100.0 + late_s, 118, 26, UTF8) for late_s in (0.01, 0.15, 0.21)]
+    assert pictures[0][:3] != pictures[1][:3]
+    assert pictures[0][4:] == pictures[1][4:]
+    assert pictures[1][4:] != pictures[2][4:]
 
 
 def test_draw_trail_with_a_silence_has_a_gap():
@@ -357,6 +367,17 @@ def test_fit_any_text_fits_and_says_when_cut(text, width):
     cut = fit(text, width)
     assert width_of(cut) <= width
     assert cut == text or cut.endswith("."[:width])
+
+
+@given(st.lists(st.tuples(st.integers(-5, 14), st.text("ab\u2500\u4e2d", max_size=8), st.sampled_from("xy"))))
+def test_put_any_texts_keeps_the_width_and_shows_the_last(puts):
+    """Whatever is put where, the row keeps its cells; a text that fits stands there as one piece of its role."""
+    line = Line(12)
+    for at, text, role in puts:
+        row = line.put(at, text, role).row()
+        assert width_of(text_of(row)) == 12
+        if at >= 0 and text and at + width_of(text) <= 12:
+            assert any(text in piece and its_role == role for piece, its_role in row)
 
 
 def test_changed_span_is_as_small_as_the_change():

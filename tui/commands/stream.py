@@ -24,6 +24,9 @@ __all__ = ["EXAMPLE", "add_arguments", "run"]
 
 EXAMPLE = "bridgewright stream sim: --count 5"
 
+#: Where several readings come at once, readings are printed ten times a second [s]; else each as it comes.
+_SEVERAL, _GATHERING_S = 3, 0.1
+
 
 def add_arguments(parser: argparse.ArgumentParser) -> None:
     """Add stream's options."""
@@ -42,6 +45,7 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(args: argparse.Namespace) -> int:
     """Print readings until the source ends, the count is reached or the user stops."""
+    from bridgeio.link import REST_S, rest_s
     from bridgeio.ports import EndOfSource, open_source
     from tui.commands.reading import desk_for, receiver_for
 
@@ -55,7 +59,8 @@ def run(args: argparse.Namespace) -> int:
         try:
             while not printer.full:
                 raw.keep(data := source.read())
-                _print_all(data, receiver, desk, printer)
+                if printed := _print_all(data, receiver, desk, printer):
+                    time.sleep(rest_s(source, data, REST_S if printed < _SEVERAL else _GATHERING_S))
         except EndOfSource:
             _tell_unfinished(raw.last, receiver)
             if desk.waiting:
@@ -64,10 +69,12 @@ def run(args: argparse.Namespace) -> int:
     return 0
 
 
-def _print_all(data: bytes, receiver: Receiver, desk: Desk, printer: _Printer) -> None:
-    arrival_s = time.time()
+def _print_all(data: bytes, receiver: Receiver, desk: Desk, printer: _Printer) -> int:
+    """Print the readings that `data` completes; returns how many."""
+    arrival_s, before = time.time(), printer.printed
     for batch in desk.take(receiver.feed(data), arrival_s):
         printer.print(batch, desk)
+    return printer.printed - before
 
 
 class _Raw:

@@ -7,6 +7,7 @@ is said in words.
 from __future__ import annotations
 
 import argparse
+import gc
 import os
 import sys
 import time
@@ -70,7 +71,9 @@ def _prepare(args: argparse.Namespace) -> tuple[Source, Receiver, Desk]:
     from tui.commands.reading import desk_for, receiver_for
 
     source = open_source(args.source, args.baud)
-    return source, receiver_for(args, source), desk_for(args, source)
+    made = source, receiver_for(args, source), desk_for(args, source)
+    gc.freeze()  # all that is loaded stays: looking through it for garbage would stop the screen for 20 ms each time
+    return made
 
 
 def _limits(args: argparse.Namespace) -> Limits:

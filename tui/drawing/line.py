@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import unicodedata
 from collections.abc import Iterable
-from itertools import groupby
+from itertools import pairwise
 from typing import TypeAlias
 
 from rich.cells import cell_len
@@ -34,15 +34,33 @@ class Line:
 
         Outside text must have come through `outside`, so that each character has cells of its own.
         """
+        if width_of(text) == len(text):
+            self._put_plain(at, text, role)
+            return self
         width = len(self._texts)
         for char in text:
-            cells = 1 if char.isascii() else cell_len(char)
+            cells = width_of(char)
             if at >= 0 and at + cells <= width:
+                self._part(at, at + cells)
                 self._texts[at], self._roles[at] = char, role
                 for beyond in range(at + 1, at + cells):
                     self._texts[beyond], self._roles[beyond] = "", role
             at += cells
         return self
+
+    def _put_plain(self, at: int, text: str, role: str) -> None:
+        """`put` of a text whose characters take one cell each, all at once."""
+        text = text[max(0, -at) : max(0, len(self._texts) - at)]
+        at = max(0, at)
+        self._part(at, at + len(text))
+        self._texts[at : at + len(text)] = text
+        self._roles[at : at + len(text)] = [role] * len(text)
+
+    def _part(self, *edges: int) -> None:
+        """Blank the wide characters that an edge, a cell about to become the first of something, runs through."""
+        for at in edges:
+            if 0 < at < len(self._texts) and self._texts[at] == "":
+                self._texts[at - 1] = self._texts[at] = " "
 
     def put_right(self, end: int, text: str, role: str = "") -> Line:
         """Write `text` so that it ends before cell `end`."""
@@ -61,10 +79,10 @@ class Line:
 
     def row(self) -> Row:
         """The line as few pieces, neighbours of one role joined."""
-        return tuple(
-            ("".join(text for text, _ in cells), role)
-            for role, cells in groupby(zip(self._texts, self._roles, strict=True), key=lambda cell: cell[1])
-        )
+        roles = self._roles
+        starts = [at for at, (before, role) in enumerate(pairwise(roles), 1) if before != role]
+        ends = pairwise([0, *starts, len(roles)]) if roles else ()
+        return tuple(("".join(self._texts[at:end]), roles[at]) for at, end in ends)
 
 
 def text_of(row: Row) -> str:

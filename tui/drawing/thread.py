@@ -7,8 +7,9 @@ which the knob turns, get most of the room while the whole minute stays in sight
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
+from collections.abc import Iterable, Iterator
 from functools import lru_cache
+from itertools import pairwise
 
 from ..trail import SPAN_S, Bin
 from .glyphs import Glyphs
@@ -19,6 +20,7 @@ __all__ = ["age_at", "draw_trail", "part_at"]
 
 _STRETCH = 0.15  # of the height goes evenly with age, the rest with its square
 _LABEL_AGES = (5.0, 15.0, 30.0, 60.0)
+_STEP_S = 0.2  # where a line of dots is longer than this the thread moves on in such steps: hardly seen, half the work
 _LABEL_WIDTH = 50  # narrower than this, the right-hand labels are dropped
 _DOT_BITS = ((0x01, 0x08), (0x02, 0x10), (0x04, 0x20), (0x40, 0x80))
 _BRAILLE = 0x2800
@@ -61,19 +63,49 @@ def draw_trail(
 
 
 def _spans(bins: Iterable[Bin], now_s: float, width: int, across: int, lines: int, gap_s: float) -> list[_Span]:
-    """What the thread covers in each line of dots: every bin's own span, and straight joins between neighbours."""
+    """What the thread covers in each line of dots: every bin's own span, and straight joins between neighbours.
+
+    Neighbours that are joined within one line are one span, so that only lines, not bins, cost much.
+    """
     spans: list[_Span] = [None] * lines
-    newer: tuple[int, int, Bin] | None = None
+    ends, at = _ends(lines), 0
+    step_from_s, stepped_s = _step_from_s(lines), math.floor(now_s / _STEP_S) * _STEP_S
+    newer: Bin | None = None
+    newer_at, low, high = -1, 1.0, 0.0
     for each in bins:
-        at = int(part_at(now_s - each.to_s) * lines)
-        if at >= lines:
+        age_s = now_s - each.to_s
+        if age_s > step_from_s:
+            age_s = stepped_s - each.to_s
+        while at < lines and age_s >= ends[at]:
+            at += 1
+        if at == lines:
             break
-        _widen(spans, at, _dot(each.low, width, across), _dot(each.high, width, across))
-        dot = _dot(each.last, width, across)
-        if newer is not None and newer[2].from_s - each.to_s <= gap_s:
-            _join(spans, newer[0], newer[1], at, dot)
-        newer = at, dot, each
+        joined = newer is not None and newer.from_s - each.to_s <= gap_s
+        if joined and at == newer_at:
+            low, high = min(low, each.low), max(high, each.high)
+        else:
+            if newer is not None:
+                _widen(spans, newer_at, _dot(low, width, across), _dot(high, width, across))
+                if joined:
+                    _join(spans, newer_at, _dot(newer.last, width, across), at, _dot(each.last, width, across))
+            low, high = each.low, each.high
+        newer, newer_at = each, at
+    if newer is not None:
+        _widen(spans, newer_at, _dot(low, width, across), _dot(high, width, across))
     return spans
+
+
+@lru_cache(maxsize=32)
+def _ends(lines: int) -> tuple[float, ...]:
+    """Age [s] at which each line of dots ends."""
+    return tuple(age_at((at + 1) / lines) for at in range(lines))
+
+
+@lru_cache(maxsize=32)
+def _step_from_s(lines: int) -> float:
+    """Age [s] from which on a line of dots stands for more than a step."""
+    ends = _ends(lines)
+    return next((before for before, end in pairwise(ends) if end - before >= _STEP_S), SPAN_S)
 
 
 def _dot(rho: float, width: int, across: int) -> int:
@@ -83,9 +115,6 @@ def _dot(rho: float, width: int, across: int) -> int:
 
 def _join(spans: list[_Span], upper: int, upper_dot: int, lower: int, lower_dot: int) -> None:
     steps = lower - upper
-    if steps == 0:
-        _widen(spans, upper, min(upper_dot, lower_dot), max(upper_dot, lower_dot))
-        return
     for step in range(steps):
         begin = upper_dot + (lower_dot - upper_dot) * step // steps
         end = upper_dot + (lower_dot - upper_dot) * (step + 1) // steps
@@ -105,9 +134,21 @@ def _row(spans: tuple[_Span, ...], width: int, rule: int | None, label: str, gly
         line.put_right(width, label, "quiet")
     if rule is not None:
         line.put(rule, glyphs.best, "best")
-    for at, char in _cells(spans, glyphs).items():
-        line.put(at, char, "thread")
+    for at, text in _runs(_cells(spans, glyphs)):
+        line.put(at, text, "thread")
     return line.row()
+
+
+def _runs(cells: dict[int, str]) -> Iterator[tuple[int, str]]:
+    """Neighbouring cells as one text with the place of its first."""
+    text, end = "", -1
+    for at in sorted(cells):
+        if at != end and text:
+            yield end - len(text), text
+            text = ""
+        text, end = text + cells[at], at + 1
+    if text:
+        yield end - len(text), text
 
 
 def _cells(spans: tuple[_Span, ...], glyphs: Glyphs) -> dict[int, str]:

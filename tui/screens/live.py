@@ -20,11 +20,14 @@ class LiveScreen(Screen[None]):
 
     glyphs: Glyphs = ASCII
     palette: Palette = PLAIN
+    first: View | None = None
     _view: View | None = None
 
     def on_mount(self) -> None:
-        """Dress once all widgets are there, so that the first picture already has its colours."""
+        """Dress and draw once all widgets are there, so that the first picture is already a whole one."""
         self.dress(self.palette)
+        if self.first is not None:
+            self.paint(self.first)
 
     def paint(self, view: View) -> None:
         """Show `view` from now on."""

@@ -138,7 +138,8 @@ class TuneUp(LiveScreen):
 
     @property
     def _width(self) -> int:
-        return self._rows("trail").size.width
+        """Cells of a row; before the first layout those that it will have."""
+        return self._rows("trail").size.width or self.size.width
 
     def _rows(self, name: str) -> Rows:
         return self.query_one(f"#{name}", Rows)

@@ -26,6 +26,10 @@ class KeyBar(Rows):
         super().__init__(id)
         self._keys = tuple(keys)
 
+    def on_mount(self) -> None:
+        """Show the keys in the first picture already, which comes before any size is told."""
+        self.show([draw_keys(self._keys, self.screen.size.width)[0]])
+
     def on_resize(self, event: events.Resize) -> None:
         """Fit the keys to the width."""
         self.show([draw_keys(self._keys, event.size.width)[0]])

@@ -5,6 +5,7 @@ One rule: a row is repainted only where it changed, and nothing here ever asks f
 
 from __future__ import annotations
 
+import re
 from collections.abc import Sequence
 
 from rich.segment import Segment
@@ -16,6 +17,9 @@ from ..drawing.line import Row, text_of
 from ..palette import PLAIN, Palette
 
 __all__ = ["Rows", "changed_span"]
+
+#: Characters that may not be one cell wide.
+_UNSURE = re.compile(r"[^\x00-\u10ff\u2000-\u28ff]")
 
 
 class Rows(Widget):
@@ -64,18 +68,31 @@ class Rows(Widget):
 
 def changed_span(old: Row, new: Row) -> tuple[int, int]:
     """First cell that differs between two rows, and the cell after the last. Whole rows where cells are not chars."""
-    before, after = _cells(old), _cells(new)
-    if before is None or after is None or len(before) != len(after):
-        return 0, max(len(text_of(old)), len(text_of(new))) * 2
-    differing = [at for at, (one, other) in enumerate(zip(before, after, strict=True)) if one != other]
-    return (differing[0], differing[-1] + 1) if differing else (0, 0)
+    before, after = text_of(old), text_of(new)
+    if len(before) != len(after) or _UNSURE.search(before) or _UNSURE.search(after):
+        return 0, max(len(before), len(after)) * 2
+    first = _shared(old, new)
+    if first == len(after):
+        return 0, 0
+    return first, len(after) - _shared(_mirrored(old), _mirrored(new))
 
 
-def _cells(row: Row) -> list[tuple[str, str]] | None:
-    """Each cell's character and role, None where a character may not be one cell wide."""
-    cells: list[tuple[str, str]] = []
-    for text, role in row:
-        if not text.isascii() and any(ord(char) >= 0x1100 and not 0x2000 <= ord(char) < 0x2900 for char in text):
-            return None
-        cells += [(char, role) for char in text]
+def _shared(old: Row, new: Row) -> int:
+    """Cells that two rows share from their left end on."""
+    cells = 0
+    for (before, role), (after, new_role) in zip(old, new, strict=False):
+        if role != new_role:
+            break
+        if before != after:
+            return cells + _first_difference(before, after)
+        cells += len(after)
     return cells
+
+
+def _first_difference(one: str, other: str) -> int:
+    pairs = enumerate(zip(one, other, strict=False))
+    return next((at for at, (mine, its) in pairs if mine != its), min(len(one), len(other)))
+
+
+def _mirrored(row: Row) -> Row:
+    return tuple((text[::-1], role) for text, role in reversed(row))
