@@ -74,7 +74,9 @@ class LiveFeed:
         now_s = time.monotonic()
         for batch in self._desk.take(items, arrival_s):
             self._count(now_s, len(batch.readings))
-            self._batch, self._reading, self._arrival_s = batch.readings, batch.readings[-1], arrival_s
+            readings = batch.readings
+            self._batch, self._reading = readings, readings if len(readings) == 1 else readings[-1]
+            self._arrival_s = arrival_s
             self._send()
 
     def _on_state(self, state: LinkState) -> None:

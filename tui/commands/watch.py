@@ -72,8 +72,17 @@ def _prepare(args: argparse.Namespace) -> tuple[Source, Receiver, Desk]:
 
     source = open_source(args.source, args.baud)
     made = source, receiver_for(args, source), desk_for(args, source)
-    gc.freeze()  # all that is loaded stays: looking through it for garbage would stop the screen for 20 ms each time
+    _tame_the_collector()
     return made
+
+
+def _tame_the_collector() -> None:
+    """All that is loaded stays, so it need not be looked through for garbage again: that stops a screen for 20 ms.
+
+    And what a paint makes is gone at the next one without it: a tenth of the searches will do.
+    """
+    gc.freeze()
+    gc.set_threshold(10 * gc.get_threshold()[0], *gc.get_threshold()[1:])
 
 
 def _limits(args: argparse.Namespace) -> Limits:
