@@ -1,6 +1,6 @@
 """What floor 1 raises. A message says what came, what was wanted and what to do; it may hold outside text, raw."""
 
-__all__ = ["BridgeIOError", "FileError", "JournalHeld", "LinkError"]
+__all__ = ["BridgeIOError", "EndOfSource", "FileError", "JournalHeld", "LinkError"]
 
 
 class BridgeIOError(Exception):
@@ -9,6 +9,10 @@ class BridgeIOError(Exception):
 
 class LinkError(BridgeIOError):
     """A port or link could not be opened, or was lost. The command line leaves with exit code 4."""
+
+
+class EndOfSource(BridgeIOError):
+    """A file or a bounded simulation has no more to give; not a fault."""
 
 
 class JournalHeld(BridgeIOError):

@@ -14,7 +14,7 @@ import sys
 from collections.abc import Callable
 from typing import TYPE_CHECKING, Protocol, runtime_checkable
 
-from bridgeio.errors import BridgeIOError, FileError, LinkError
+from bridgeio.errors import EndOfSource, FileError, LinkError
 from bridgeio.plugged import Port, absent, check_device, find_again, in_words, list_ports, lost_errors, port_at
 
 if TYPE_CHECKING:
@@ -35,10 +35,6 @@ WAIT_S = 0.25
 CHUNK = 65536
 #: A terminal device hands out no more at a time, however much waits behind it.
 FULL_BYTES = 4095
-
-
-class EndOfSource(BridgeIOError):
-    """A file or a bounded simulation has no more to give; not a fault."""
 
 
 class Source(Protocol):

@@ -9,8 +9,7 @@ import time
 from collections.abc import Callable, Iterator
 from typing import TYPE_CHECKING
 
-from bridgeio.errors import LinkError
-from bridgeio.ports import EndOfSource
+from bridgeio.errors import EndOfSource, LinkError
 
 from .options import parse_options
 
