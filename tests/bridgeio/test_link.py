@@ -3,11 +3,9 @@
 from __future__ import annotations
 
 import itertools
-import os
 import threading
 import time
-import tty
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from io import FileIO
 
 import pytest
@@ -91,17 +89,6 @@ def until(condition: Callable[[], bool], timeout_s: float = 10.0) -> None:
 def frames(count: int) -> bytes:
     """So many tallies on the wire, after the lone zero of a start."""
     return b"\0" + pack(Tallies.of(range(count), [10 * n for n in range(count)], 1000, 50))
-
-
-@pytest.fixture
-def pty() -> Iterator[tuple[FileIO, str]]:
-    """A pseudo terminal: its master, to write to and to close, and the path of the other end."""
-    master, slave = os.openpty()
-    tty.setraw(slave)
-    path = os.ttyname(slave)
-    os.close(slave)
-    with open(master, "r+b", buffering=0) as held:
-        yield held, path
 
 
 def test_frames_pass_from_port_to_listener(pty: tuple[FileIO, str]) -> None:

@@ -9,8 +9,7 @@ import subprocess
 import sys
 import termios
 import threading
-import tty
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from io import FileIO
 from pathlib import Path
 from types import SimpleNamespace
@@ -27,17 +26,6 @@ from bridgeio.ports import DeviceSource, EndOfSource, FileSource, open_source
 from bridgeio.simulator.source import SimulatedSource
 
 ROOT = Path(next(iter(bridgeio.__path__))).parent
-
-
-@pytest.fixture
-def pty() -> Iterator[tuple[FileIO, str]]:
-    """A pseudo terminal: its master, to write to and to close, and the path of the other end."""
-    master, slave = os.openpty()
-    tty.setraw(slave)
-    path = os.ttyname(slave)
-    os.close(slave)
-    with open(master, "r+b", buffering=0) as held:
-        yield held, path
 
 
 @pytest.fixture
