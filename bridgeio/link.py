@@ -1,9 +1,10 @@
-"""One reader thread between a source and those who listen: it alone opens, reads and closes the port.
+"""One reader between a source and those who listen: it alone opens, reads and closes the port, in a thread of its own
+(`start`) or in the caller's (`run`).
 
 A port that was open and is gone is looked for until it is back, or the link is stopped.
 
-One rule: whatever happens in the thread reaches the listeners as a state in words, and nothing can keep the
-program from ending.
+One rule: whatever happens to the source reaches the listeners as a state in words, and nothing can keep the program
+from ending.
 """
 
 from __future__ import annotations
@@ -15,7 +16,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from bridgeio.errors import BridgeIOError, LinkError
-from bridgeio.ports import EndOfSource, Returning, Source
+from bridgeio.ports import EndOfSource, Resting, Returning, Source
 
 if TYPE_CHECKING:
     from bridgeio.frames import Item
@@ -40,6 +41,8 @@ TRY_EVERY_S = 0.5
 #: After frames have been handed on the next ones gather for this long [s]: most of what a frame costs is the same for
 #: a dozen. A bridge that sends fewer than thirty a second never waits, and half a frame is never waited for.
 REST_S = 0.03
+#: One who stops a link waits no longer than this for a source that is just being opened [s]: nothing has come from it.
+_OPENING_S = 1.0
 #: Where so much comes at once [bytes] there is no time to rest: a terminal's buffer holds hardly more.
 _PLENTY_BYTES = 3072
 
@@ -58,12 +61,12 @@ def rest_s(source: Source, data: bytes, wanted_s: float = REST_S) -> float:
 
 
 class Link:
-    """Reads `source` through `receiver` in a daemon thread of its own.
+    """Reads `source` through `receiver`, in a daemon thread of its own or in the caller's.
 
     `on_items(items, arrival_s)`, `on_state(state)` and `on_reopened()` are called from that thread; arrival is in
     seconds UTC. `on_reopened` comes when the source is back after a loss, before anything read from it: what was known
-    of the board no longer holds, for another one may have been plugged in. persist: a source that does not open at
-    first is looked for like one that was lost.
+    of the board no longer holds, for another one may have been plugged in. on_bytes: given what was read before
+    anything is made of it. persist: a source that does not open at first is looked for like one that was lost.
     """
 
     def __init__(
@@ -75,16 +78,22 @@ class Link:
         silent_after_s: float = SILENT_AFTER_S,
         *,
         on_reopened: Callable[[], None] = lambda: None,
+        on_bytes: Callable[[bytes], object] = lambda data: None,
         persist: bool = False,
     ) -> None:
         self._source, self._receiver = source, receiver
         self._on_items, self._on_state, self._on_reopened = on_items, on_state, on_reopened
+        self._on_bytes = on_bytes
+        #: After frames more may gather for this long [s]; a listener may change it.
+        self.rest_s = REST_S
         self._persist = persist
         self._tried_s = -TRY_EVERY_S
         self._silence = _Silence(silent_after_s)
         self._state = LinkState("opening", f"opening {source.name}")
         self._error: Exception | None = None
         self._stopping = threading.Event()
+        # Whoever can rest with an eye on the port does, so that a pulled plug is no later for it.
+        self._rest: Callable[[float], object] = source.rest if isinstance(source, Resting) else self._stopping.wait
         self._thread = threading.Thread(target=self._run, name="link reader", daemon=True)
 
     @property
@@ -97,6 +106,17 @@ class Link:
         """Start reading. A link runs once; for another run make another link."""
         self._thread.start()
 
+    def run(self) -> None:
+        """Read in the calling thread, in place of `start`, until the source ends or a listener calls `stop`.
+
+        Raises LinkError or FileError where it does not open or is lost for good, and what a listener raises.
+        """
+        try:
+            final = self._session()
+        except EndOfSource as error:
+            final = LinkState("ended", str(error))
+        self._tell(final)
+
     def stop(self, timeout_s: float = 2.0) -> None:
         """Let the reader hand on what it has read, close and end; left behind after `timeout_s` [s].
 
@@ -104,7 +124,8 @@ class Link:
         """
         self._stopping.set()
         if self._thread.is_alive() and self._thread is not threading.current_thread():
-            self._thread.join(timeout_s)
+            closed = self._state.phase in ("opening", "looking")
+            self._thread.join(min(timeout_s, _OPENING_S) if closed else timeout_s)
             if self._thread.is_alive():
                 self._state = LinkState("lost", f"{self._source.name} does not answer and was left behind")
         error, self._error = self._error, None
@@ -179,14 +200,18 @@ class Link:
         self._tell(LinkState("open", f"{self._source.name} is open"))
 
     def _step(self, data: bytes) -> None:
-        arrival_s = time.time()
-        items = self._receiver.feed(data) if data else []
+        arrival_s, items = time.time(), []
+        if data:
+            self._on_bytes(data)
+            items = self._receiver.feed(data)
         self._silence.heard(data, bool(items))
         state = self._silence.state() or LinkState("open", f"{self._source.name} is open")
         self._tell_new(state)
         if items:
             self._on_items(items, arrival_s)
-            self._stopping.wait(rest_s(self._source, data))
+            rest = rest_s(self._source, data, self.rest_s)
+            if rest and not self._stopping.is_set():
+                self._rest(rest)
 
     def _tell(self, state: LinkState) -> None:
         self._state = state

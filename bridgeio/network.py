@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 from urllib.parse import urlsplit
 
 from bridgeio.errors import LinkError
-from bridgeio.ports import CHUNK, WAIT_S
+from bridgeio.ports import CHUNK, WAIT_S, rest_on
 
 if TYPE_CHECKING:
     import serial
@@ -22,6 +22,8 @@ __all__ = ["RemotePortSource", "SocketSource"]
 CONNECT_S = 1.5
 #: A host that vanishes without a word is noticed after 5 s of silence and three questions 2 s apart.
 _KEEP_ALIVE = (("TCP_KEEPIDLE", 5), ("TCP_KEEPINTVL", 2), ("TCP_KEEPCNT", 3))
+#: Poll's word for a connection that the other end has closed, where the system has one.
+_CLOSED_THERE = getattr(select, "POLLRDHUP", 0)
 
 
 class SocketSource:
@@ -61,6 +63,10 @@ class SocketSource:
         if not data:
             raise LinkError(f"{self.name} is gone: it was closed by the other end")
         return data
+
+    def rest(self, seconds: float) -> None:
+        """Let more gather for `seconds` [s], less where the other end has closed the connection."""
+        rest_on(None if self._socket is None else self._socket.fileno(), seconds, _CLOSED_THERE)
 
     def close(self) -> None:
         """Close the connection; harmless where it is closed."""

@@ -11,6 +11,7 @@ import difflib
 import os
 import select
 import sys
+import time
 from collections.abc import Callable
 from typing import TYPE_CHECKING, Protocol, runtime_checkable
 
@@ -25,10 +26,12 @@ __all__ = [
     "EndOfSource",
     "FileSource",
     "Port",
+    "Resting",
     "Returning",
     "Source",
     "list_ports",
     "open_source",
+    "rest_on",
 ]
 
 WAIT_S = 0.25
@@ -60,6 +63,14 @@ class Returning(Source, Protocol):
 
     def reopen(self) -> bool:
         """Open it again, under whatever name. False while it is not there, LinkError where it does not open."""
+
+
+@runtime_checkable
+class Resting(Source, Protocol):
+    """A source that notices while nobody reads that it is gone."""
+
+    def rest(self, seconds: float) -> None:
+        """Let more gather for `seconds` [s], less where it is gone: the next `read` says so. Data does not wake it."""
 
 
 def open_source(text: str, baud: int = 115200) -> Source:
@@ -142,6 +153,10 @@ class DeviceSource:
             raise LinkError(f"{self.name} is gone: it was unplugged")
         return data
 
+    def rest(self, seconds: float) -> None:
+        """Let more gather for `seconds` [s], less where the port is gone."""
+        rest_on(None if self._port is None else _descriptor(self._port), seconds)
+
     def set_baud(self, baud: int) -> None:
         """Change the rate without closing, so that a board does not reset; bytes waiting are thrown away."""
         self.baud = baud
@@ -214,6 +229,21 @@ class FileSource:
         fd, self._fd = self._fd, None
         if fd is not None and self._path != "-":
             os.close(fd)
+
+
+def rest_on(fd: int | None, seconds: float, events: int = 0) -> None:
+    """Wait `seconds` [s], less where `fd` hangs up or fails, or `events` of poll come; where there is no poll, wait."""
+    if fd is None or not hasattr(select, "poll"):
+        time.sleep(seconds)
+        return
+    poll = select.poll()
+    poll.register(fd, events)  # a hang-up and an error are told unasked
+    poll.poll(1000.0 * seconds)
+
+
+def _descriptor(port: serial.Serial) -> int | None:
+    """What to wait on; None on Windows, where a port has none."""
+    return None if sys.platform == "win32" else port.fileno()
 
 
 def _take_exclusively(port: serial.Serial) -> None:

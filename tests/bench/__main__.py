@@ -16,7 +16,7 @@ from dataclasses import asdict
 from pathlib import Path
 from typing import Any
 
-from . import arithmetic, chain, latency, screen, start, wire
+from . import arithmetic, chain, journal, latency, screen, start, wire
 from .cost import QUICK, Figure, Sizes, loads
 
 __all__ = ["PARTS", "main", "measure"]
@@ -25,6 +25,7 @@ __all__ = ["PARTS", "main", "measure"]
 PARTS: dict[str, Callable[[Sizes], list[Figure]]] = {
     "wire": wire.measure,
     "chain": chain.measure,
+    "journal": journal.measure,
     "arithmetic": arithmetic.measure,
     "screen": screen.measure,
     "latency": latency.measure,

@@ -1,4 +1,5 @@
-"""The chain as it is written at first: a line, two Newton iterations and one JSON object a reading.
+"""The chain as it is written at first: a line, two Newton iterations and one JSON object a reading; and, where it is to
+be kept, one row and one commit.
 
 One rule: nothing in it is slowed down on purpose, and nothing is done by arrays. It knows no interval.
 """
@@ -7,6 +8,7 @@ from __future__ import annotations
 
 import json
 import math
+import sqlite3
 import sys
 from datetime import UTC, datetime
 from typing import Any
@@ -18,7 +20,7 @@ from calibration.laws import DiodeLaw
 from tests.bench import counts
 from tests.bench.counts import FREQUENCY_HZ
 
-__all__ = ["NaiveChain", "wave_square"]
+__all__ = ["NaiveChain", "NaiveJournal", "wave_square"]
 
 
 def wave_square(count: float, offset: float, scale: float, load_term: float) -> float:
@@ -42,7 +44,7 @@ def wave_square(count: float, offset: float, scale: float, load_term: float) -> 
 
 
 class NaiveChain:
-    """From a line of text to a line of JSON."""
+    """From a line of text to a reading, and to a line of JSON."""
 
     def __init__(self) -> None:
         bridge, band = counts.bridge(), counts.band()
@@ -56,10 +58,14 @@ class NaiveChain:
 
     def answer(self, line: bytes) -> str:
         """The JSON object for `line`."""
+        return json.dumps(self.reading(line))
+
+    def reading(self, line: bytes) -> dict[str, Any]:
+        """All that is said of `line`."""
         forward, reflected = (int(word) for word in line.split())
         forward_w = wave_square(forward, *self._forward) / self._gains[0] ** 2
         reflected_w = wave_square(reflected, *self._reflected) / self._gains[1] ** 2
-        return json.dumps(self._reading(forward, reflected, forward_w, reflected_w))
+        return self._reading(forward, reflected, forward_w, reflected_w)
 
     def _reading(self, forward: int, reflected: int, forward_w: float, reflected_w: float) -> dict[str, Any]:
         rho = math.sqrt(reflected_w / forward_w) if forward_w else 0.0
@@ -81,6 +87,25 @@ class NaiveChain:
         }
 
 
+class NaiveJournal:
+    """A table with a row a reading, each committed."""
+
+    _COLUMNS = ("time", "forward_counts", "reflected_counts", "forward_w", "reflected_w", "net_w", "rho", "swr")
+
+    def __init__(self, path: str, *settings: str) -> None:
+        """Make it; settings: words of PRAGMA, in place of SQLite's own (a rollback journal, FULL)."""
+        self._link = sqlite3.connect(path)
+        for setting in settings:
+            self._link.execute(f"PRAGMA {setting}")
+        self._link.execute(f"CREATE TABLE reading ({', '.join(self._COLUMNS)})")
+        self._insert = f"INSERT INTO reading VALUES ({', '.join('?' * len(self._COLUMNS))})"
+
+    def keep(self, reading: dict[str, Any]) -> None:
+        """One row, one commit."""
+        self._link.execute(self._insert, [reading[name] for name in self._COLUMNS])
+        self._link.commit()
+
+
 def _log_i0(x: float) -> float:
     """ln I0(x); beyond what I0 can hold by the first terms of its expansion."""
     if x < 700.0:
@@ -89,11 +114,15 @@ def _log_i0(x: float) -> float:
 
 
 def main() -> None:
-    """Print readings from the port named by the first argument until stopped."""
+    """Print readings from the port named by the first argument until stopped; kept in the file named by the second."""
     chain = NaiveChain()
+    journal = NaiveJournal(*sys.argv[2:]) if len(sys.argv) > 2 else None
     with serial.Serial(sys.argv[1], 115200) as port:
         while True:
-            print(chain.answer(port.readline()), flush=True)
+            reading = chain.reading(port.readline())
+            if journal is not None:
+                journal.keep(reading)
+            print(json.dumps(reading), flush=True)
 
 
 if __name__ == "__main__":

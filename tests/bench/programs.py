@@ -80,6 +80,11 @@ class Program:
         os.close(self._fd)
 
     @property
+    def running(self) -> bool:
+        """Whether it has not ended."""
+        return self._process.poll() is None
+
+    @property
     def cpu_s(self) -> float:
         """CPU time [s] that it has used since its start."""
         return cpu_s(self._process.pid)

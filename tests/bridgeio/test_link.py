@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import functools
 import itertools
+import re
 import threading
 import time
 from collections.abc import Callable
 from io import FileIO
+from pathlib import Path
 
 import pytest
 
@@ -134,14 +137,19 @@ def test_rest_is_for_what_gathers() -> None:
     assert rest_s(file, bytes(15)) == 0.0
 
 
-def test_port_unplugged_is_looked_for_in_words(pty: tuple[FileIO, str]) -> None:
-    """When the other end goes away the link says so, and that it looks for it, until it is stopped."""
+def test_port_unplugged_is_looked_for_in_words(pty: tuple[FileIO, str], tmp_path: Path) -> None:
+    """When the other end goes away the link says so, and for how long it has looked for it, until it is stopped."""
     master, path = pty
+    # A name of our own: that of a terminal which is gone may be given to somebody else's at once.
+    port = tmp_path / "port"
+    port.symlink_to(path)
     listener = Listener()
-    link = listener.link(DeviceSource(path))
+    link = listener.link(DeviceSource(str(port)))
     until(lambda: "open" in listener.phases)
+    port.unlink()
     master.close()
-    until(lambda: link.state == LinkState("looking", f"{path} is gone: it was unplugged; looking for it for 1 s"))
+    words = rf"{port} is gone: it was unplugged; looking for it for [1-9]\d* s"
+    until(lambda: re.fullmatch(words, link.state.words) is not None)
     link.stop()
     assert listener.phases == ["opening", "open", "looking", "ended"]
 
@@ -227,6 +235,70 @@ def test_stop_joins_the_thread() -> None:
     assert set(threading.enumerate()) <= before
     assert link.state == LinkState("ended", "scripted is closed")
     link.stop()
+
+
+def test_stop_while_a_source_is_being_opened() -> None:
+    """A source that takes long to open is left behind within 1 s, and the state has said what is going on."""
+    release, listener = threading.Event(), Listener()
+
+    class Slow(Scripted):
+        def open(self) -> None:
+            super().open()
+            release.wait(30)
+
+    source = Slow()
+    link = listener.link(source)
+    until(lambda: bool(source.calls))
+    assert link.state == LinkState("opening", "opening scripted")
+    began_s = time.monotonic()
+    link.stop(timeout_s=20.0)
+    assert time.monotonic() - began_s < 5.0
+    assert link.state == LinkState("lost", "scripted does not answer and was left behind")
+    release.set()
+    until(lambda: source.calls[-1][0] == "close")
+    assert ("read", "link reader") not in source.calls
+
+
+def test_link_may_run_in_the_thread_of_the_caller() -> None:
+    """`run` opens, reads and closes in the calling thread, and returns once a listener has stopped it."""
+    source, listener = Scripted(frames(2)), Listener()
+    link = Link(source, Receiver(), lambda _items, _at: link.stop(), listener.on_state)
+    link.run()
+    assert {thread for _, thread in source.calls} == {threading.current_thread().name}
+    assert [what for what, _ in source.calls] == ["open", "read", "close"]
+    assert listener.phases == ["opening", "open", "ended"]
+
+
+def test_run_ends_with_the_source() -> None:
+    """`run` returns at the end of a source, and raises what a source is lost by, closed in either case."""
+
+    def fail(error: Exception) -> bytes:
+        raise error
+
+    ended, lost = (
+        Scripted(then=functools.partial(fail, error))
+        for error in (EndOfSource("it has ended"), LinkError("it is gone"))
+    )
+    listener = Listener()
+    Link(ended, Receiver(), listener.on_items, listener.on_state).run()
+    assert listener.states[-1] == LinkState("ended", "it has ended")
+    with pytest.raises(LinkError, match="it is gone"):
+        Link(lost, Receiver(), listener.on_items, listener.on_state).run()
+    assert ended.calls[-1][0] == lost.calls[-1][0] == "close"
+
+
+def test_bytes_are_handed_on_before_what_is_made_of_them() -> None:
+    """Every byte that was read comes as it is, before the items in it."""
+    told: list[bytes | str] = []
+    data = frames(2)
+    link = Link(
+        Scripted(data[:5], data[5:]), Receiver(), lambda _items, _at: told.append("items"), lambda _: None,
+        on_bytes=told.append,
+    )  # fmt: skip
+    link.start()
+    until(lambda: "items" in told)
+    link.stop()
+    assert told == [data[:5], data[5:], "items"]
 
 
 def test_stop_before_start() -> None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import select
 import socket
 import threading
+import time
 from collections.abc import Iterator
 
 import pytest
@@ -12,8 +13,10 @@ import serial
 from serial.rfc2217 import PortManager
 
 from bridgeio.errors import LinkError
+from bridgeio.link import Link, LinkState
 from bridgeio.network import RemotePortSource, SocketSource
 from bridgeio.ports import Source, open_source
+from bridgeio.receiver import Receiver
 
 
 @pytest.fixture
@@ -166,3 +169,33 @@ def test_remote_port_sets_the_rate_and_reads(server: socket.socket) -> None:
     source.close()
     with pytest.raises(LinkError, match="is not open"):
         source.read()
+
+
+def test_rest_ends_where_the_connection_does(server: socket.socket) -> None:
+    """Whoever lets bytes gather is back as soon as the other end closes, and not for bytes that come."""
+    source = SocketSource(f"socket://127.0.0.1:{port_of(server)}")
+    source.open()
+    far, _ = server.accept()
+    with far:
+        far.sendall(b"abc")
+        began_s = time.monotonic()
+        source.rest(0.1)
+        assert time.monotonic() - began_s >= 0.1
+    source.rest(30.0)
+    assert time.monotonic() - began_s < 10.0
+    assert source.read() == b"abc"
+    source.close()
+
+
+def test_server_that_lends_no_port_is_left_behind(server: socket.socket) -> None:
+    """While a server does not answer the state says that it is being opened, and stopping does not wait for it."""
+    name = f"rfc2217://127.0.0.1:{port_of(server)}"
+    link = Link(RemotePortSource(name), Receiver(), lambda _items, _at: None, lambda _: None)
+    link.start()
+    far, _ = server.accept()
+    with far:
+        assert link.state == LinkState("opening", f"opening {name}")
+        began_s = time.monotonic()
+        link.stop()
+        assert time.monotonic() - began_s < 2.0
+    assert link.state.phase == "lost"

@@ -7,6 +7,7 @@ import signal
 import subprocess
 import sys
 import time
+import tty
 from datetime import datetime
 from pathlib import Path
 
@@ -326,3 +327,88 @@ def test_interrupt_ends_it_quietly():
     assert (process.returncode, err) == (130, "")
     assert all(json.loads(line) for line in [first, *out.splitlines()])
     assert out == "" or out.endswith("\n")
+
+
+# A board that is pulled out and put back
+
+
+@pytest.fixture
+def sockets(tmp_path):
+    """A port by a link that leads to one pseudo terminal after the other; gives `plug`, which returns the far end."""
+    port, held = tmp_path / "bridge", []
+
+    def plug():
+        master, slave = os.openpty()
+        tty.setraw(slave)
+        fresh = tmp_path / "fresh"
+        fresh.symlink_to(os.ttyname(slave))
+        fresh.replace(port)
+        os.close(slave)
+        held.append(os.fdopen(master, "wb", buffering=0))
+        return held[-1]
+
+    yield port, plug
+    for far in held:
+        far.close()
+
+
+def said_until(process, words):
+    """What it says on standard error, line by line, up to a line with these words."""
+    for line in process.stderr:
+        if words in line:
+            return line
+    raise AssertionError(f"{words!r} was never said")
+
+
+def reading(process):
+    """The next reading."""
+    return json.loads(process.stdout.readline())
+
+
+def test_board_that_is_pulled_and_put_back_is_read_on(sockets, tmp_path):
+    """A pulled plug is said once, its return too; readings go on, counts only until the board has told its name."""
+    port, plug = sockets
+    file = parse_bridge_file(BRIDGE_FILE.read_text(encoding="utf-8"), "x")
+
+    def plate(device_id):
+        return pack(Nameplate(0, 10, 0, 1, device_id, 10, 16, file.full_scale, 0, 0, 0, 0, "double"))
+
+    def tally(number):
+        return pack(Tallies.of(number, 10 * number, 30_000, 9_000))
+
+    far, raw = plug(), tmp_path / "raw"
+    process = start(str(port), "--bridge", str(BRIDGE_FILE), "--frequency", "20m", "--raw", str(raw))
+    try:
+        until_kept(raw, lambda: far.write(plate(file.device_id)))
+        far.write(tally(1))
+        assert reading(process)["swr"] is not None
+        port.unlink()  # before the terminal, whose name may be given to another at once
+        far.close()
+        assert said_until(process, "looking") == (
+            f"bridgewright stream: {port} is gone: it was unplugged; looking for it\n"
+        )
+        far = plug()
+        assert said_until(process, "again") == f"bridgewright stream: {port} is open again\n"
+        far.write(b"\0" + tally(1))
+        assert reading(process)["swr"] is None
+        far.write(plate(0x57A46E03) + tally(2))
+        assert reading(process)["swr"] is None
+        far.write(plate(file.device_id) + tally(3))
+        assert reading(process)["swr"] is not None
+        process.send_signal(signal.SIGINT)
+        _, rest = process.communicate(timeout=20)
+    finally:
+        process.kill()
+    assert "looking" not in rest
+    assert process.returncode == 130
+    assert raw.read_bytes().endswith(plate(0x57A46E03) + tally(2) + plate(file.device_id) + tally(3))
+
+
+def until_kept(path, send):
+    """Send until something is kept: what comes before the port is open is thrown away with its opening."""
+    end_s = time.monotonic() + 20.0
+    while not path.exists() or not path.stat().st_size:
+        assert time.monotonic() < end_s
+        if path.exists():
+            send()
+        time.sleep(0.01)

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import argparse
 import sys
-import time
+from collections.abc import Callable, Sequence
 from contextlib import ExitStack
 from typing import IO, TYPE_CHECKING
 
@@ -17,6 +17,8 @@ from tui.door import say, visible
 
 if TYPE_CHECKING:
     from bridgeio.desk import Desk, TimedReadings
+    from bridgeio.frames import Item
+    from bridgeio.link import Link, LinkState
     from bridgeio.ports import Source
     from bridgeio.receiver import Receiver
 
@@ -44,44 +46,80 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 
 def run(args: argparse.Namespace) -> int:
-    """Print readings until the source ends, the count is reached or the user stops."""
-    from bridgeio.link import REST_S, rest_s
-    from bridgeio.ports import EndOfSource, open_source
+    """Print readings until the source ends, the count is reached or the user stops; one that was lost is looked for."""
+    from bridgeio.link import Link
+    from bridgeio.ports import open_source
     from tui.commands.reading import desk_for, receiver_for
 
     source = open_source(args.source, args.baud)
     receiver, desk = receiver_for(args, source), desk_for(args, source)
     with ExitStack() as held:
-        held.callback(source.close)
-        source.open()
-        raw = _Raw(args.raw, held)
-        printer = _Printer(args.format, args.count)
-        try:
-            while not printer.full:
-                raw.keep(data := source.read())
-                if printed := _print_all(data, receiver, desk, printer):
-                    time.sleep(rest_s(source, data, REST_S if printed < _SEVERAL else _GATHERING_S))
-        except EndOfSource:
-            _tell_unfinished(raw.last, receiver)
-            if desk.waiting:
-                _tell(f"the last {desk.waiting} tallies make no average of {args.average} and were left out")
+        raw, printer = _Raw(args.raw, held), _Printer(args.format, args.count)
+        states = _States(raw.begin, printer.begin)
+        link = Link(
+            source,
+            receiver,
+            lambda items, arrival_s: _print_all(items, arrival_s, desk, printer, link),
+            states.tell,
+            on_reopened=desk.reopened,
+            on_bytes=raw.keep,
+        )
+        link.run()
+    if not printer.full:
+        _tell_unfinished(raw.last, receiver)
+        if desk.waiting:
+            _tell(f"the last {desk.waiting} tallies make no average of {args.average} and were left out")
     _tell_end(receiver, printer, source)
     return 0
 
 
-def _print_all(data: bytes, receiver: Receiver, desk: Desk, printer: _Printer) -> int:
-    """Print the readings that `data` completes; returns how many."""
-    arrival_s, before = time.time(), printer.printed
-    for batch in desk.take(receiver.feed(data), arrival_s):
+def _print_all(items: Sequence[Item], arrival_s: float, desk: Desk, printer: _Printer, link: Link) -> None:
+    """Print the readings that `items` complete; the link rests by how many there are, and ends with the last one."""
+    from bridgeio.link import REST_S
+
+    before = printer.printed
+    for batch in desk.take(items, arrival_s):
         printer.print(batch, desk)
-    return printer.printed - before
+    link.rest_s = REST_S if printer.printed - before < _SEVERAL else _GATHERING_S
+    if printer.full:
+        link.stop()
+
+
+class _States:
+    """Begins the output when the source is open, and says when it is lost and when it is back."""
+
+    def __init__(self, *begin: Callable[[], None]) -> None:
+        self._begin, self._begun, self._said = begin, False, ""
+
+    def tell(self, state: LinkState) -> None:
+        """Hear a state of the link."""
+        if state.phase == "looking":
+            # For how long it has been looked for is no news.
+            words = state.words.rpartition(" for ")[0]
+            if words != self._said:
+                _tell(words)
+            self._said = words
+        elif state.phase == "open" and not self._begun:
+            self._begun = True
+            for begin in self._begin:
+                begin()
+        elif self._said:
+            _tell(f"{state.words} again")
+            self._said = ""
 
 
 class _Raw:
     """Keeps the bytes as they come, in a new file where one is wanted; the last byte in any case."""
 
     def __init__(self, path: str | None, held: ExitStack) -> None:
-        self._path, self._file, self.last = path, None if path is None else held.enter_context(_new_file(path)), b""
+        self._path, self._held = path, held
+        self._file: IO[bytes] | None = None
+        self.last = b""
+
+    def begin(self) -> None:
+        """Make the file, once there is something to keep. FileError where that cannot be."""
+        if self._path is not None:
+            self._file = self._held.enter_context(_new_file(self._path))
 
     def keep(self, data: bytes) -> None:
         """Write at once: whatever ends us, what came is kept. FileError where that cannot be."""
@@ -102,8 +140,12 @@ class _Printer:
 
         self._rows, self._left, self.printed = FORMATS[form], count, 0
         self._said: set[str] = set()
-        if form == "csv":
-            print(csv_header())
+        self._header = csv_header() if form == "csv" else None
+
+    def begin(self) -> None:
+        """Print what goes before the rows."""
+        if self._header is not None:
+            print(self._header)
 
     @property
     def full(self) -> bool:
