@@ -18,7 +18,7 @@ from bridgeio.frames import Item, Nameplate, Tallies
 from .book import Block, Mark, Row, Stretch
 from .pack import Micros, Timed, frames_in
 
-__all__ = ["BLOCK_S", "MOST_FRAMES", "Assembly", "Feed", "Unkept"]
+__all__ = ["BLOCK_S", "MOST_FRAMES", "Assembly", "Feed", "Reopened", "Unkept"]
 
 #: A block is cut at this age: a fifth is left for the disk, so that a kill costs a second at most [s].
 BLOCK_S = 0.8
@@ -50,6 +50,13 @@ class Unkept:
     frames: int
     first_s: float
     last_s: float
+
+
+@dataclass(frozen=True, slots=True)
+class Reopened:
+    """The source was lost and is back since `utc_us` [us since 1970], perhaps with another board."""
+
+    utc_us: int
 
 
 class Assembly:
@@ -88,6 +95,13 @@ class Assembly:
             self._counted = (0, 0)
         self._stretch = stretch
         self.rows.append(stretch)
+
+    def reopened(self, started_us: int) -> None:
+        """The source was lost and is back: whose frames follow is not known until a nameplate tells."""
+        self.cut()
+        self._clock.restart()
+        self._stretch = replace(self._stretch, nameplate=None, started_us=started_us)
+        self.rows.append(self._stretch)
 
     def mark(self, mark: Mark) -> None:
         """Note something, after the frames that came before it."""

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import fcntl
 import os
+import time
 from pathlib import Path
 
 from bridgeio.errors import FileError, JournalHeld
@@ -16,6 +17,8 @@ __all__ = ["JournalHeld", "JournalLock"]
 
 #: A lock file deleted by its owner between our opening and our locking is tried again.
 _TRIES = 50
+#: Between our being refused and the owner's writing its pid pass microseconds; longer than this nobody waits [s].
+_NAMELESS_S = 0.5
 
 
 class JournalLock:
@@ -51,7 +54,7 @@ class JournalLock:
         try:
             fcntl.flock(self._fd, fcntl.LOCK_EX | fcntl.LOCK_NB)
         except BlockingIOError as error:
-            owner = os.pread(self._fd, 20, 0).decode("ascii", "replace").strip()
+            owner = self._owner()
             os.close(self._fd)
             raise JournalHeld(
                 f"{self._journal}: is being written by process {owner or 'unknown'}; wanted a journal nobody writes: "
@@ -67,6 +70,15 @@ class JournalLock:
         os.pwrite(self._fd, f"{os.getpid()}\n".encode("ascii"), 0)
         return True
 
+    def _owner(self) -> str:
+        """The pid in the file; where it is none of a living process, the owner has only just taken the lock: wait."""
+        end_s = time.monotonic() + _NAMELESS_S
+        while True:
+            owner = os.pread(self._fd, 20, 0).decode("ascii", "replace").strip()
+            if _lives(owner) or time.monotonic() >= end_s:
+                return owner
+            time.sleep(0.005)
+
     def _is_ours(self) -> bool:
         """Whether the path still leads to the file we hold."""
         held = os.fstat(self._fd)
@@ -75,3 +87,16 @@ class JournalLock:
         except OSError:
             return False
         return (held.st_dev, held.st_ino) == (found.st_dev, found.st_ino)
+
+
+def _lives(pid: str) -> bool:
+    """Whether a process with this pid is there, whoever owns it."""
+    if not (pid.isascii() and pid.isdigit() and 0 < int(pid) < 1 << 31):
+        return False
+    try:
+        os.kill(int(pid), 0)
+    except ProcessLookupError:
+        return False
+    except PermissionError:
+        return True
+    return True

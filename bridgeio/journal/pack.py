@@ -22,7 +22,7 @@ from bridgeio.frames import KIND_BY_NUMBER, KINDS, Item, Kind, Tallies, Unknown,
 
 from .columns import Columns, PackError, coded, split
 
-__all__ = ["Micros", "Timed", "contents_of", "frames_in", "unpack"]
+__all__ = ["Micros", "Timed", "contents_of", "frames_in", "unpack", "utc_of_runs"]
 
 #: Runs of one shape join where their offsets differ by no more than this [us].
 _SAME_OFFSET_US = 5_000
@@ -271,11 +271,17 @@ def _offset_us(one: Timed) -> int:
 
 
 def _utc_us(ms: npt.NDArray[np.uint32], runs: Sequence[_Run]) -> Micros:
-    """UTC [us] by the device times [ms] of tallies: within a run they count from its first, across a wrap too."""
-    frames = np.array([run.frames for run in runs])
+    """UTC [us] by the device times [ms] of tallies in runs."""
+    frames, offset_us = np.array([run.frames for run in runs]), np.array([run.offset_us for run in runs], np.int64)
+    return utc_of_runs(ms, frames, offset_us)
+
+
+def utc_of_runs(ms: npt.NDArray[np.uint32], frames: npt.NDArray[Any], offset_us: Micros) -> Micros:
+    """UTC [us, n] by device times [ms, n] and runs' frames and offsets [us]; within a run they count from its first,
+    across a wrap too."""
     first = np.cumsum(frames) - frames
     start_ms = ms[first]
-    start_us = start_ms.astype(np.int64) * _US_PER_MS + np.array([run.offset_us for run in runs], dtype=np.int64)
+    start_us = start_ms.astype(np.int64) * _US_PER_MS + offset_us
     since_ms = (ms - np.repeat(start_ms, frames)).view(np.int32)
     return np.asarray(np.repeat(start_us, frames) + since_ms.astype(np.int64) * _US_PER_MS)
 

@@ -6,19 +6,23 @@ One rule: no count comes out of a block whose CRC, digest or content is wrong; a
 from __future__ import annotations
 
 import hashlib
+import itertools
+import math
+import operator
 import sqlite3
 import struct
 import time
 from collections.abc import Callable, Iterable, Iterator, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import Any, Literal
+from typing import Any, Literal, NamedTuple
 
 from bridgeio.errors import FileError
 from bridgeio.frames import Nameplate, Tallies
 
 from .book import DIGEST_START, Mark, Stretch
 from .columns import LONGEST_CONTENT, PackError, inflate
+from .gather import Gathered, gather
 from .pack import Timed, unpack
 from .schema import BLOCK_COLUMNS, MARK_COLUMNS, STRETCH_COLUMNS, block_crc, connect_to_read, row_crc
 
@@ -41,8 +45,7 @@ class BadBlock:
     words: str
 
 
-@dataclass(frozen=True, slots=True)
-class KeptBlock:
+class KeptBlock(NamedTuple):
     """One sound block: its account (see `BLOCK_COLUMNS`) and its content, unpacked when asked for."""
 
     id: int
@@ -108,6 +111,9 @@ class Journal:
         self.bad: list[BadBlock] = []
         #: What was found wrong in stretches and marks, in words.
         self.faults: list[str] = []
+        #: Of the last sound block that the last walk came to: the digest over all before it. None before a walk.
+        self.digest: bytes | None = None
+        self._sum = _Sum()
 
     def __enter__(self) -> Journal:
         return self
@@ -132,23 +138,41 @@ class Journal:
     @property
     def marks(self) -> list[Mark]:
         """Marks in the order they were made; a damaged one is left out and told in `faults`."""
+        return [mark for _, mark in self.placed_marks]
+
+    @property
+    def placed_marks(self) -> list[tuple[int, Mark]]:
+        """The same, each with the number of the stretch in which it was made."""
         rows = self._sound_rows("mark", MARK_COLUMNS)
-        return [Mark(kind, utc_us, text, value) for _, _, utc_us, kind, value, text in rows]
+        return [(stretch, Mark(kind, utc_us, text, value)) for _, stretch, utc_us, kind, value, text in rows]
 
     def blocks(self) -> Iterator[KeptBlock]:
         """Sound blocks in order; what is not sound is gathered in `bad`."""
-        self.bad = []
         for batch in self._batches():
             yield from batch
 
     def items(self) -> Iterator[Timed]:
         """All items in order, with times; tallies with nothing between them come together, minutes at a time."""
-        self.bad = []
         for batch in self._batches():
             try:
                 yield from unpack([block.content for block in batch])
             except PackError:
                 yield from self._one_by_one(batch)
+
+    def gathered(self, from_us: int | None = None, to_us: int | None = None) -> Iterator[Gathered]:
+        """The content as columns, minutes at a time and one stretch in each; every block is checked.
+
+        from_us, to_us: blocks that lie wholly before or after are left out [us since 1970].
+        """
+        low, high = -math.inf if from_us is None else from_us, math.inf if to_us is None else to_us
+        for batch in self._batches():
+            wanted = (block for block in batch if block.utc_last_us >= low and block.utc_first_us <= high)
+            for stretch, group in itertools.groupby(wanted, key=operator.attrgetter("stretch")):
+                blocks = list(group)
+                try:
+                    yield gather(stretch, [block.content for block in blocks])
+                except PackError:
+                    yield from self._gathered_singly(blocks)
 
     def tallies(self) -> Iterator[Timed]:
         """As `items`, the tallies only."""
@@ -156,14 +180,16 @@ class Journal:
 
     def account(self) -> Account:
         """What is there and what is missing, all blocks checked."""
-        kept = missing = unkept = damaged = 0
-        losses = []
-        for block in self.blocks():
-            kept, missing, unkept = kept + block.frames, missing + block.missing, unkept + block.unkept
-            damaged += block.damaged
-            if block.missing or block.unkept:
-                losses.append(block.utc_first_us)
-        return Account(kept, missing, unkept, damaged, tuple(losses), tuple(self.bad))
+        for _ in self._batches():
+            pass
+        return self.walked
+
+    @property
+    def walked(self) -> Account:
+        """The same of the last walk, by whatever it was made; whole once that has come to its end."""
+        so_far = self._sum
+        counts = so_far.kept, so_far.missing, so_far.unkept, so_far.damaged
+        return Account(*counts, tuple(so_far.losses), tuple(self.bad))
 
     def _one_by_one(self, batch: Sequence[KeptBlock]) -> Iterator[Timed]:
         for block in batch:
@@ -172,11 +198,23 @@ class Journal:
             except PackError as error:
                 self._name(block.id, block.utc_first_us, str(error))
 
+    def _gathered_singly(self, blocks: Sequence[KeptBlock]) -> Iterator[Gathered]:
+        for block in blocks:
+            try:
+                yield gather(block.stretch, [block.content])
+            except PackError as error:
+                self._name(block.id, block.utc_first_us, str(error))
+
     def _batches(self) -> Iterator[list[KeptBlock]]:
+        """All sound blocks, added up on the way; what is not sound is gathered in `bad`."""
+        self.bad, self._sum = [], _Sum()
         walk = _Walk(self._name)
         while rows := self._fetch(before := walk.last):
             # One short read transaction a batch: a long one would keep the writer's log from being folded in.
-            yield from _bounded(block for row in rows if (block := walk.step(row)) is not None)
+            for batch in _bounded(block for row in rows if (block := walk.step(row)) is not None):
+                self._sum.add(batch)
+                self.digest = walk.digest or self.digest
+                yield batch
             if walk.last == before:
                 # A damaged index may lead in a circle.
                 self._name(before + 1, None, "and all after it lie in a damaged part of the file")
@@ -237,6 +275,27 @@ class Journal:
             self.bad.append(BadBlock(block, number, utc_us, words))
 
 
+@dataclass(slots=True)
+class _Sum:
+    """What sound blocks add up to."""
+
+    kept: int = 0
+    missing: int = 0
+    unkept: int = 0
+    damaged: int = 0
+    losses: list[int] = field(default_factory=list)
+
+    def add(self, blocks: Iterable[KeptBlock]) -> None:
+        """Take these blocks in."""
+        for block in blocks:
+            self.kept += block.frames
+            if block.missing or block.unkept or block.damaged:
+                self.missing, self.unkept = self.missing + block.missing, self.unkept + block.unkept
+                self.damaged += block.damaged
+                if block.missing or block.unkept:
+                    self.losses.append(block.utc_first_us)
+
+
 @dataclass(frozen=True, slots=True)
 class _Unreadable:
     """Stands for a row that SQLite cannot hand over."""
@@ -253,7 +312,7 @@ class _Walk:
         self._name = name
         self._utc_us: int | None = None
         # None where the block before is bad or absent: then the chain begins anew.
-        self._digest: bytes | None = DIGEST_START
+        self.digest: bytes | None = DIGEST_START
 
     def step(self, row: tuple[Any, ...] | _Unreadable) -> KeptBlock | None:
         """The block in a row, or None where it is bad, which is named then."""
@@ -263,7 +322,7 @@ class _Walk:
         if number > self.last + 1:
             absent = number - self.last - 1
             self._name(self.last + 1, self._utc_us, "is not in the journal any more", absent)
-            self._digest = None
+            self.digest = None
         self.last = number
         try:
             if isinstance(row, _Unreadable):
@@ -271,7 +330,7 @@ class _Walk:
             return self._sound(row)
         except PackError as error:
             self._name(number, self._about_us(row), str(error))
-            self._digest = None
+            self.digest = None
             return None
 
     def _sound(self, row: tuple[Any, ...]) -> KeptBlock:
@@ -283,10 +342,10 @@ class _Walk:
         if not intact:
             raise PackError("does not agree with its CRC-32")
         content = inflate(packed, length)
-        if self._digest is not None and hashlib.sha256(self._digest + content).digest() != digest:
+        if self.digest is not None and hashlib.sha256(self.digest + content).digest() != digest:
             raise PackError("does not follow the block before it: its digest is another")
-        self._digest, self._utc_us = digest, head[3]
-        return KeptBlock(**dict(zip(BLOCK_COLUMNS, head, strict=False)), content=content)
+        self.digest, self._utc_us = digest, head[3]
+        return KeptBlock._make((*head, content))
 
     def _about_us(self, row: tuple[Any, ...] | _Unreadable) -> int | None:
         """The time of a bad block by the one before it, else by its own word [us since 1970]."""

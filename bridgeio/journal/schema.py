@@ -152,11 +152,14 @@ def _demand_journal(path: Path, link: sqlite3.Connection, empty_will_do: bool) -
 
 
 def _settle(link: sqlite3.Connection) -> None:
-    """WAL and full synchronisation; tables in one transaction where there are none, so none is ever half made."""
-    link.execute("PRAGMA journal_mode = WAL")
+    """Full synchronisation and WAL; tables in one transaction where there are none, so none is ever half made.
+
+    The tables come first: until they are there a reader finds an empty file, after that a journal, never another one.
+    """
     link.execute("PRAGMA synchronous = FULL")
     if _pragma(link, "user_version") == 0:
         link.executescript(f"BEGIN IMMEDIATE;{_TABLES}COMMIT;")
+    link.execute("PRAGMA journal_mode = WAL")
 
 
 def _pragma(link: sqlite3.Connection, name: str) -> int:

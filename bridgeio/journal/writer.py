@@ -18,7 +18,7 @@ from bridgeio.account import Counters
 from bridgeio.errors import BridgeIOError
 from bridgeio.frames import Item
 
-from .assembly import Assembly, Feed, Unkept
+from .assembly import Assembly, Feed, Reopened, Unkept
 from .book import Book, Mark, Stretch
 from .pack import frames_in
 
@@ -31,7 +31,9 @@ _MOST_MARKS = 10_000
 #: What a feed weighs in the queue beside its frames, so that empty ones are bounded too.
 _FEED_WEIGHT = 1
 
-_POLL_S, _TICK_S, _RETRY_S, _LOOK_S = 0.1, 0.002, 1.0, 1.0
+_POLL_S, _TICK_S, _RETRY_S, _LOOK_S = 0.1, 0.002, 1.0, 0.25
+#: So often, and so far apart [s], the last rows are tried when told to stop.
+_LAST_TRIES, _LAST_PAUSE_S = 3, 0.25
 #: A commit that takes this long is told [s].
 _SLOW_S = 1.0
 #: Our clock against the steady one: more than this between two looks is a step [s].
@@ -73,7 +75,7 @@ class Writer:
         self._wall, self._steady = wall, steady
         self._most_waiting = most_waiting
         self._guard = threading.Lock()
-        self._queue: deque[Feed | Mark | Stretch | Unkept] = deque()
+        self._queue: deque[Feed | Mark | Reopened | Stretch | Unkept] = deque()
         self._waiting = self._marks_waiting = 0
         self._gap: Unkept | None = None
         self._fault: Exception | None = None
@@ -133,6 +135,11 @@ class Writer:
         with self._guard:
             self._queue.append(stretch)
 
+    def reopened(self) -> None:
+        """The source was lost and is back: what is put from here on is of no known board until a nameplate tells."""
+        with self._guard:
+            self._queue.append(Reopened(int(self._wall() * _US)))
+
     def stop(self, timeout_s: float = 10.0) -> bool:
         """Write what waits and close the journal. False where the disk has not taken it within `timeout_s`."""
         self._ending.set()
@@ -185,6 +192,8 @@ class Writer:
                 self._assembly.mark(entry)
             elif isinstance(entry, Stretch):
                 self._assembly.begin(entry)
+            elif isinstance(entry, Reopened):
+                self._assembly.reopened(entry.utc_us)
             else:
                 self._assembly.unkept(entry)
         self._assembly.tick(self._steady())
@@ -196,22 +205,32 @@ class Writer:
             self._gap = None
 
     def _write(self, ending: bool) -> None:
-        """Commit the rows gathered; while the disk refuses, try again every second and let the queue fill."""
-        while True:
+        """Commit the rows gathered; while the disk refuses, try again every second and let the queue fill.
+
+        At the end it is tried a few times: what a last write adds, a mark on how long it took, is written too.
+        """
+        tries = _LAST_TRIES
+        while self._assembly.rows:
             self._look()
             started_s = self._writing_since_s = self._steady()
+            tries -= 1
             try:
                 last = self._book.write(self._assembly.rows)
             except sqlite3.Error as error:
                 self._refused(error)
-                if ending or self._ending.wait(_RETRY_S):
+                if not ending and self._ending.wait(_RETRY_S):
                     return
-                continue
+                if ending:
+                    time.sleep(_LAST_PAUSE_S)
+            else:
+                self._assembly.rows = []
+                self._committed(last, self._steady() - started_s)
+                if not ending:
+                    return
             finally:
                 self._writing_since_s = None
-            self._assembly.rows = []
-            self._committed(last, self._steady() - started_s)
-            return
+            if ending and not tries:
+                return
 
     def _committed(self, last: int, took_s: float) -> None:
         if self._trouble_since_s is not None:
@@ -264,7 +283,7 @@ class Writer:
             self._assembly.clock_stepped(utc_s, step_s)
 
     def _finish(self) -> None:
-        if self._assembly.rows:
+        if self._trouble_since_s is not None:
             words = f"{self._assembly.frames} frames could not be written: {self._state.words}"
             self._book.close()
             self._tell("stopped", words)
