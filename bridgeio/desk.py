@@ -21,16 +21,16 @@ from .clock import DeviceClock
 from .frames import FLAG_DROPPED, Conditions, Item, Nameplate, Tallies
 from .shelf import Calibration, Shelf
 
-__all__ = ["Desk", "Reading", "TimedReadings"]
+__all__ = ["FRESH_S", "NAMELESS_MS", "SAME_WARMTH_S", "Desk", "Reading", "TimedReadings"]
 
 Array = npt.NDArray[np.float64]
 
 #: A frequency told by the bridge is believed for this long [s].
-_FRESH_S = 10.0
+FRESH_S = 10.0
 #: Nameplates come every 2 s: a bridge that has talked this long without one sends none [ms].
-_NAMELESS_MS = 4500
+NAMELESS_MS = 4500
 #: A temperature told by the bridge is believed for this long [s]: a box has a slow one.
-_SAME_WARMTH_S = 60.0
+SAME_WARMTH_S = 60.0
 _NO_TEMPERATURE = -32768
 #: Between two tallies so many frames of other kinds may stand; more missing numbers than that are a gap.
 _OTHER_FRAMES = 3
@@ -99,14 +99,14 @@ class Desk:
     @property
     def frequency_hz(self) -> float | None:
         """The frequency [Hz] that readings are taken at now: the bridge's own word while fresh, else the option."""
-        if self._told_hz is not None and abs(self._now_s() - self._told_hz[1]) <= _FRESH_S:
+        if self._told_hz is not None and abs(self._now_s() - self._told_hz[1]) <= FRESH_S:
             return self._told_hz[0]
         return self.frequency_option_hz
 
     @property
     def temperature_c(self) -> float | None:
         """The box's temperature [degrees Celsius] as the bridge told it within the last minute."""
-        if self._told_c is not None and abs(self._now_s() - self._told_c[1]) <= _SAME_WARMTH_S:
+        if self._told_c is not None and abs(self._now_s() - self._told_c[1]) <= SAME_WARMTH_S:
             return self._told_c[0]
         return None
 
@@ -132,6 +132,16 @@ class Desk:
         if chosen is not None:
             return chosen.meter.bridge.name
         return self.nameplate.name if self.nameplate else None
+
+    @property
+    def calibration(self) -> Calibration | None:
+        """The calibration in force: bridge file, meter and running dark count; None while readings are counts only."""
+        return self._choice(self._checked)[0]
+
+    @property
+    def clock_ppm(self) -> float | None:
+        """How much faster than ours the bridge's clock is [millionths]; None where that is not known yet."""
+        return self._device_clock.ppm
 
     @property
     def note(self) -> str | None:
@@ -202,7 +212,7 @@ class Desk:
             last_ms = int(tallies.ms[-1])
             if self._since_ms is None or last_ms < self._since_ms:
                 self._since_ms = int(tallies.ms[0])
-            self._nameless = self._nameless or last_ms - self._since_ms > _NAMELESS_MS
+            self._nameless = self._nameless or last_ms - self._since_ms > NAMELESS_MS
 
     def _read(self, tallies: Tallies, time_s: Array) -> TimedReadings:
         counts = tallies.forward, tallies.reflected

@@ -6,36 +6,35 @@ whether it is still alive is judged by a clock of our own, because a dead link s
 
 from __future__ import annotations
 
-import os
 import threading
 import time
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any, ClassVar
 
 from textual.app import App
 from textual.binding import Binding, BindingType
 from textual.message import Message
-from textual.theme import Theme
 
 from .alarm import Alarm, AlarmState, KeyClock, Limits
 from .drawing.glyphs import glyphs
+from .drawing.journal import journal_trouble
 from .mailbox import Delivery, Mailbox
 from .messages import Feed, Snapshot, View
-from .palette import DARK, LIGHT, palette
+from .pace import Pace, stale_after_s
+from .palette import palette
 from .sample import Sample, Sampler
 from .screens import SCREENS, LiveScreen
 from .screens.help import Help
+from .themes import THEMES, no_color
 from .trail import Trail
 
-__all__ = ["BridgewrightApp", "stale_after_s"]
+__all__ = ["BridgewrightApp"]
 
 _PAINTS_PER_READING = 1.5  # the cap on paints lies above the feed's rate, so that jitter delays none,
 _LASTING_PAINTS = 1.1  # and in the long run just above it, so that a faster feed costs hardly more
 _TICK_S = 0.25  # clocks and the ageing trail move on without readings
 _FIRST_READING_S = 3.0  # before the first reading, silence is not yet a fault: boards reset when the port opens
-_STALE_S, _STALE_PERIODS = 0.25, 3.0
 _SAME_FREQUENCY = 1e-3  # a smaller change does not begin a new tune-up
 
 
@@ -48,6 +47,7 @@ class BridgewrightApp(App[None]):
         Binding("q,ctrl+c", "quit", "quit"),
         Binding("question_mark", "help", "help"),
         Binding("d", "toggle_dark", "dark/light"),
+        Binding("s", "next_screen", "screens"),
     ]
 
     class Woken(Message):
@@ -74,17 +74,17 @@ class BridgewrightApp(App[None]):
         clock: Callable[[], float] = time.monotonic,
     ) -> None:
         """`rate_hz` [Hz] is the rate at which the feed sends readings; `clock` [s] must be steady."""
-        with _no_color(not color):
+        with no_color(not color):
             super().__init__(ansi_color=None if color else True)
         self._feed, self._clock, self._color = feed, clock, color
-        self._first_screen = screen
+        self._shown, self._screens = screen, dict[str, LiveScreen]()
         self.glyphs = glyphs(ascii)
         self.limits = limits or Limits()
         least_s, mean_s = (1.0 / (paints * rate_hz) for paints in (_PAINTS_PER_READING, _LASTING_PAINTS))
         self.mailbox = Mailbox(self._wake, least_s, clock, mean_s)
         self._snapshot = Snapshot()
         self._alarm, self._key_clock, self._trail = Alarm(self.limits), KeyClock(), Trail()
-        self._sampler = Sampler()
+        self._sampler, self._pace = Sampler(), Pace()
         self._last: Sample | None = None
         self._rung: frozenset[str] = frozenset()
         self._heard_s = clock()
@@ -96,16 +96,37 @@ class BridgewrightApp(App[None]):
 
     def get_default_screen(self) -> LiveScreen:
         """The screen asked for lies at the bottom of the stack."""
-        screen = SCREENS[self._first_screen]()
-        screen.glyphs, screen.palette = self.glyphs, palette(self._color, dark=True)
-        screen.first = self._view()
-        return screen
+        return self._screen_named(self._shown)
+
+    def show_screen(self, name: str) -> None:
+        """Show the screen of that name in SCREENS; each is made once and keeps what it has."""
+        if isinstance(self.screen, LiveScreen):
+            self._shown, screen = name, self._screen_named(name)
+            if len(self.screen_stack) > 1:  # one at most lies upon the first, which the library never lets go
+                self.pop_screen()
+            if screen is not self.screen:
+                self.push_screen(screen)
+
+    def repaint(self) -> None:
+        """Show the present moment on the screen on top, in the colours in force."""
+        for screen in self.screen_stack[-1:]:
+            if isinstance(screen, LiveScreen):
+                screen.dress(palette(self._color, self.current_theme.dark))
+        self._paint()
+
+    def _screen_named(self, name: str) -> LiveScreen:
+        if name not in self._screens:
+            screen = self._screens[name] = SCREENS[name]()
+            screen.glyphs, screen.palette = self.glyphs, palette(self._color, dark=self.current_theme.dark)
+            screen.first = self._view()
+            self.install_screen(screen, name)  # else the library ends it when another takes its place
+        return self._screens[name]
 
     def on_mount(self) -> None:
         """Set the colours; nothing else is loaded yet."""
-        for theme in _THEMES:
+        for theme in THEMES:
             self.register_theme(theme)
-        self.theme = _THEMES[0 if self._color else 2].name
+        self.theme = THEMES[0 if self._color else 2].name
 
     def on_ready(self) -> None:
         """Paint the first picture; only when it stands start the feed, whose imports would delay it."""
@@ -151,7 +172,12 @@ class BridgewrightApp(App[None]):
     def action_toggle_dark(self) -> None:
         """Dark to light and back."""
         if self._color:
-            self.theme = _THEMES[1 if self.current_theme.dark else 0].name
+            self.theme = THEMES[1 if self.current_theme.dark else 0].name
+
+    def action_next_screen(self) -> None:
+        """The next screen of SCREENS, after the last one the first."""
+        names = list(SCREENS)
+        self.show_screen(names[(names.index(self._shown) + 1) % len(names)])
 
     def action_help(self) -> None:
         """Keys, symbols, words and cautions."""
@@ -194,6 +220,7 @@ class BridgewrightApp(App[None]):
         if _moved(before.frequency_hz, delivery.snapshot.frequency_hz):
             self._trail.forget()
         for at_s, batch in delivery.readings:
+            self._pace.feed(at_s, len(batch.flags))
             for sample in self._sampler.samples(at_s, batch):
                 self._last = sample
                 for listener in (self._alarm, self._key_clock, self._trail):
@@ -205,7 +232,7 @@ class BridgewrightApp(App[None]):
 
     def _watch_silence(self) -> None:
         """Paint when the newest reading has just become old; one timer, set anew only when it has run out."""
-        left_s = self._heard_s + stale_after_s(self._snapshot.period_ms) - self._clock()
+        left_s = self._heard_s + self._lasting_s - self._clock()
         self._watching = left_s > 0.0
         if self._watching:
             self.set_timer(left_s, self._watch_silence)
@@ -217,18 +244,23 @@ class BridgewrightApp(App[None]):
         if self._clock() - self._heard_s >= _TICK_S:
             self._paint()
 
+    @property
+    def _lasting_s(self) -> float:
+        """Age [s] from which the newest reading is stale."""
+        return stale_after_s(self._snapshot.period_ms, self._pace.spacing_s)
+
     def _silent(self) -> bool:
         silent_s = self._clock() - self._heard_s
         if self._snapshot.reading is None:
             return silent_s > _FIRST_READING_S
-        return silent_s >= stale_after_s(self._snapshot.period_ms)
+        return silent_s >= self._lasting_s
 
     def _paint(self) -> None:
         """Show the present moment on the screen on top."""
         view = self._view()
         if view.stale:
             self._alarm.lapse()
-        self._ring(frozenset(view.alarm.over))
+        self._ring(frozenset((*view.alarm.over, *journal_trouble(view.snapshot.journal))))
         for screen in self.screen_stack[-1:]:  # none is left while the program ends
             if isinstance(screen, LiveScreen):
                 screen.paint(view)
@@ -241,11 +273,21 @@ class BridgewrightApp(App[None]):
         limit_s = self.limits.key_down_s
         if key.down and limit_s is not None and key.seconds > limit_s:
             alarm = AlarmState((*alarm.over, "key down"), alarm.may, alarm.blind)
-        silent_s = now_s - self._heard_s
-        return View(self._snapshot, now_s, silent_s, silent, stale, alarm, self.limits, key, self._trail)
+        return View(
+            snapshot=self._snapshot,
+            now_s=now_s,
+            silent_s=now_s - self._heard_s,
+            silent=silent,
+            stale=stale,
+            alarm=alarm,
+            limits=self.limits,
+            key=key,
+            trail=self._trail,
+            lasting_s=self._lasting_s,
+        )
 
     def _ring(self, over: frozenset[str]) -> None:
-        """One bell for each limit that is newly passed."""
+        """One bell for each limit that is newly passed, and for a journal that newly is in trouble."""
         if over - self._rung:
             self.bell()
         self._rung = over
@@ -258,38 +300,8 @@ class BridgewrightApp(App[None]):
                 screen.redraw()
 
 
-@contextmanager
-def _no_color(wanted: bool) -> Iterator[None]:
-    """Have the library strip, or keep, the colour of its own widgets: it asks NO_COLOR when an app is made."""
-    before = os.environ.pop("NO_COLOR", None)
-    if wanted:
-        os.environ["NO_COLOR"] = "1"
-    try:
-        yield
-    finally:
-        os.environ.pop("NO_COLOR", None)
-        if before is not None:
-            os.environ["NO_COLOR"] = before
-
-
-def stale_after_s(period_ms: float) -> float:
-    """Age [s] from which a reading is stale: three periods [ms] or 250 ms, whichever is longer."""
-    return max(_STALE_S, _STALE_PERIODS * period_ms / 1000.0)
-
-
 def _moved(before_hz: float | None, after_hz: float | None) -> bool:
     """Whether the frequency is another one, so that the best point means nothing any more."""
     if before_hz is None or after_hz is None:
         return False
     return abs(after_hz - before_hz) > _SAME_FREQUENCY * before_hz
-
-
-def _theme(name: str, ground: str, text: str, accent: str, dark: bool) -> Theme:
-    return Theme(name=name, primary=accent, foreground=text, background=ground, surface=ground, panel=ground, dark=dark)
-
-
-_THEMES = (
-    _theme("shack-dark", DARK.ground, "#d8dee6", "#56b4e9", True),
-    _theme("shack-light", LIGHT.ground, "#1c2126", "#0072b2", False),
-    _theme("shack-plain", "ansi_default", "ansi_default", "ansi_default", True),
-)

@@ -11,6 +11,8 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Protocol
 
 if TYPE_CHECKING:
+    from bridgeio.journal import JournalState
+    from bridgeio.line_watch import LineFacts
     from bridgeio.link import LinkState
     from calibration.meter import Readings
 
@@ -28,7 +30,9 @@ class Snapshot:
     batch: all readings that came together with it, itself the last; None where it came alone. arrival_s: when they
     came [s since 1970]. rate_hz: frames a second as they come. lost, damaged: frames since the port opened, lost "at
     least". period_ms: nominal spacing [ms], 0 where irregular. note: a sentence for people, such as both full scales
-    where they disagree. Texts are raw: the screen makes them visible.
+    where they disagree. caution: what the board says against the calibration, in a sentence. facts: of the line, at
+    most a quarter of a second old. journal: how recording stands, None where nothing is recorded. Texts are raw: the
+    screen makes them visible.
     """
 
     reading: Readings | None = None
@@ -43,6 +47,9 @@ class Snapshot:
     frequency_hz: float | None = None
     period_ms: float = 0.0
     note: str | None = None
+    caution: str | None = None
+    facts: LineFacts | None = None
+    journal: JournalState | None = None
 
 
 class Feed(Protocol):
@@ -66,7 +73,7 @@ class View:
     """One moment as a screen paints it.
 
     now_s: a steady clock [s]. silent_s: age of the newest reading [s]. silent: too long without one. stale: silent, or
-    the newest reading is flagged stale.
+    the newest reading is flagged stale. lasting_s: age from which a reading counts as old [s].
     """
 
     snapshot: Snapshot
@@ -78,3 +85,4 @@ class View:
     limits: Limits
     key: KeyState
     trail: Trail
+    lasting_s: float = 0.25

@@ -6,13 +6,22 @@ import argparse
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
+    from pathlib import Path
+
     from bridgeio.account import Counters
     from bridgeio.bridge_file import BridgeFile
     from bridgeio.desk import Desk
     from bridgeio.ports import Source
     from bridgeio.receiver import Receiver
 
-__all__ = ["damage_in_words", "desk_for", "receiver_for"]
+__all__ = ["bridge_paths", "damage_in_words", "desk_for", "receiver_for"]
+
+
+def bridge_paths(args: argparse.Namespace, source: Source) -> list[str | Path]:
+    """The bridge files to read by; the simulated bridge brings its own."""
+    from bridgeio.simulator import BRIDGE_FILE
+
+    return list(args.bridge) or ([BRIDGE_FILE] if source.simulated else [])
 
 
 def desk_for(args: argparse.Namespace, source: Source) -> Desk:
@@ -22,10 +31,8 @@ def desk_for(args: argparse.Namespace, source: Source) -> Desk:
     """
     from bridgeio.bridge_file import load_bridge_file
     from bridgeio.desk import Desk, Reading
-    from bridgeio.simulator import BRIDGE_FILE
 
-    paths = list(args.bridge) or ([BRIDGE_FILE] if source.simulated else [])
-    files = [load_bridge_file(path) for path in paths]
+    files = [load_bridge_file(path) for path in bridge_paths(args, source)]
     how = Reading(
         frequency_hz=_frequency_hz(args.frequency, files),
         samples=getattr(args, "samples", 1),

@@ -11,6 +11,7 @@ import gc
 import os
 import sys
 import time
+from collections.abc import Callable
 from typing import TYPE_CHECKING
 
 from tui.commands.options import add_reading_options, add_source_options, positive
@@ -21,6 +22,7 @@ if TYPE_CHECKING:
     from bridgeio.ports import Source
     from bridgeio.receiver import Receiver
     from tui.alarm import Limits
+    from tui.live_feed import Keeping
     from tui.messages import Feed, Snapshot
 
 __all__ = ["EXAMPLE", "add_arguments", "run"]
@@ -38,6 +40,12 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--rate", type=positive, metavar="HZ", help="paints a second on the screen (20), sentences with --plain (1)"
     )
+    parser.add_argument(
+        "--screen", type=_screen, default="tune-up", metavar="NAME", help="the screen to begin with (tune-up); key s"
+    )
+    parser.add_argument(
+        "--journal", metavar="FILE", help="keep all that comes, as `keep` does; continued if it is there"
+    )
     parser.add_argument("--limit-swr", type=positive, metavar="S", help="alarm above this SWR")
     parser.add_argument("--limit-power", type=positive, metavar="W", help="alarm above this forward power")
     parser.add_argument("--limit-key", type=positive, metavar="S", help="alarm after this many seconds of key-down")
@@ -49,13 +57,14 @@ def run(args: argparse.Namespace) -> int:
     from tui.terminal import terminal
 
     shown_on = terminal(os.environ, sys.stdout.encoding, sys.stdout.isatty() and sys.stdin.isatty())
-    feed = LiveFeed(lambda: _prepare(args))
+    feed = LiveFeed(lambda: _prepare(args), _keeping(args))
     if args.plain or not shown_on.screen:
         return _in_sentences(feed, args.rate or _PLAIN_HZ)
     from tui.app import BridgewrightApp
 
     app = BridgewrightApp(
         feed,
+        screen=args.screen,
         ascii=shown_on.ascii,
         color=shown_on.color,
         limits=_limits(args),
@@ -74,6 +83,34 @@ def _prepare(args: argparse.Namespace) -> tuple[Source, Receiver, Desk]:
     made = source, receiver_for(args, source), desk_for(args, source)
     _tame_the_collector()
     return made
+
+
+def _keeping(args: argparse.Namespace) -> Callable[[Source], Keeping] | None:
+    """What the journal needs, asked when the bridge files have been found good; None where none is wanted."""
+    if args.journal is None:
+        return None
+
+    def keeping(source: Source) -> Keeping:
+        from bridgeio.bridge_file import sheet_text
+        from tui.commands.reading import bridge_paths
+        from tui.live_feed import Keeping
+
+        return Keeping(args.journal, {str(path): sheet_text(path) for path in bridge_paths(args, source)})
+
+    return keeping
+
+
+def _screen(text: str) -> str:
+    """The name of a screen, for argparse."""
+    import difflib
+
+    from tui.screens import SCREENS
+
+    if text in SCREENS:
+        return text
+    near = difflib.get_close_matches(text.lower(), SCREENS, n=1)
+    hint = f"did you mean {near[0]}? " if near else ""
+    raise argparse.ArgumentTypeError(f"there is no screen {text[:40]!r}; {hint}known: {', '.join(SCREENS)}")
 
 
 def _tame_the_collector() -> None:
@@ -107,12 +144,14 @@ def _in_sentences(feed: Feed, rate_hz: float) -> int:
 
 
 class _Teller:
-    """Says what is new in a snapshot: a change of the link and a note to standard error, readings to output."""
+    """Says what is new in a snapshot: link, journal, note and caution to standard error, readings to output."""
 
     def __init__(self, rate_hz: float) -> None:
         self._spacing_s, self._due_s = 1.0 / rate_hz, 0.0
         self._phase: str | None = None
         self._note: str | None = None
+        self._caution: str | None = None
+        self._journal: str | None = None
         self.ended = False
 
     def tell(self, snapshot: Snapshot) -> None:
@@ -123,6 +162,13 @@ class _Teller:
         if snapshot.note != self._note:
             self._note = snapshot.note
             say(snapshot.note or "readings are calibrated again")
+        if snapshot.caution != self._caution:
+            self._caution = snapshot.caution
+            if snapshot.caution:
+                say(snapshot.caution)
+        if snapshot.journal is not None and snapshot.journal.phase != self._journal:
+            self._journal = snapshot.journal.phase
+            say(snapshot.journal.words)
         if snapshot.link is not None:
             self._tell_link(snapshot.link)
         if snapshot.reading is not None and time.monotonic() >= self._due_s:

@@ -14,6 +14,7 @@ from ..messages import Snapshot
 from ..readout import FLAG_WORDS, Readout, frequency_text, swr_of_rho
 from ..trail import Relation
 from .glyphs import Glyphs
+from .journal import journal_word
 from .line import Line, Piece, Row, fit, outside, width_of
 from .scale import column
 
@@ -54,20 +55,26 @@ def link_words(snapshot: Snapshot, glyphs: Glyphs) -> Piece:
 
 
 def draw_remarks(readout: Readout, snapshot: Snapshot, width: int, glyphs: Glyphs) -> Row:
-    """Flags in words and the note; a narrow screen, without room in the status line, has trouble first, name last."""
+    """Flags in words and the note, else what the board says against its calibration; at the right how recording stands.
+
+    A narrow screen, without room in the status line, has trouble first, name last.
+    """
     parts: list[Piece] = []
     if width < _NARROW:
         words, role = link_words(snapshot, glyphs)
         if role != "quiet" or snapshot.lost or snapshot.damaged:
             parts.append((words, role))
     parts += [(words, "label" if words == FLAG_WORDS["simulated"] else "word") for words in readout.remarks]
-    if snapshot.note:
-        parts.append((outside(snapshot.note, not glyphs.dots), "word"))
+    if note := snapshot.note or snapshot.caution:
+        parts.append((outside(note, not glyphs.dots), "word"))
     name = snapshot.bridge or snapshot.nameplate
     if width < _NARROW and name:
         parts.append((outside(name, not glyphs.dots), "label"))
     text = "; ".join(words for words, _ in parts)
-    return Line(width).put(0, fit(text, width), parts[0][1] if parts else "").row()
+    journal, journal_role = journal_word(snapshot.journal)
+    room = width - width_of(journal) - 2 if journal else width
+    line = Line(width).put(0, fit(text, room), parts[0][1] if parts else "")
+    return line.put_right(width, journal, journal_role).row()
 
 
 def draw_best(relation: Relation, stale: bool, width: int, glyphs: Glyphs) -> Row:
@@ -82,8 +89,8 @@ def draw_best(relation: Relation, stale: bool, width: int, glyphs: Glyphs) -> Ro
     return line.put(at, fit(best, room), "best").put_right(width, away, "label").row()
 
 
-def draw_alarm(alarm: AlarmState, limits: Limits, width: int) -> Row:
-    """The alarm line: over, may exceed, blind or quiet, and the limits."""
+def draw_alarm(alarm: AlarmState, limits: Limits, width: int, key: str = "a") -> Row:
+    """The alarm line: over, may exceed, blind or quiet, and the limits; `key` sets them, "" where none does."""
     line = Line(width)
     names = _limit_words(limits, brief=width < _NARROW)
     if alarm.over:
@@ -94,7 +101,7 @@ def draw_alarm(alarm: AlarmState, limits: Limits, width: int) -> Row:
         return line.put(0, fit(f"! may exceed {', '.join(texts)}", width), "may").row()
     known = ", ".join(names.values())
     if not known:
-        return line.put(0, "no limits set: press a", "quiet").row()
+        return line.put(0, f"no limits set: press {key}" if key else "no limits set", "quiet").row()
     wide = width >= _NARROW
     blind = "no alarm can be given" if wide else "alarm blind"
     begin, role = (blind, "word") if alarm.blind else ("no alarm", "quiet")

@@ -14,7 +14,8 @@ __all__ = ["ASCII", "UTF8", "Glyphs", "glyphs"]
 class Glyphs:
     """track, tick, left_end, right_end, infinity: the scale. band_left, band, band_right, open_right: the interval.
     mark: the reading, old_mark when stale. best: the rule of the best point. limit: the alarm limit. delivered,
-    returned, empty: the ribbon, old when stale. towards, away, same: direction. dots: the thread in braille dots."""
+    returned, empty: the ribbon, old when stale. towards, away, same: direction. bars: a histogram's heights, lowest
+    first. dots: the thread in braille dots."""
 
     track: str
     tick: str
@@ -36,6 +37,7 @@ class Glyphs:
     towards: str
     away: str
     same: str
+    bars: str
     dots: bool
 
 
@@ -60,6 +62,7 @@ ASCII = Glyphs(
     towards="<<",
     away=">>",
     same="==",
+    bars=".:-=+*%#",
     dots=False,
 )
 
@@ -84,6 +87,7 @@ UTF8 = Glyphs(
     towards="◀◀",
     away="▶▶",
     same="══",
+    bars="▁▂▃▄▅▆▇█",
     dots=True,
 )
 

@@ -5,6 +5,8 @@ One rule: a screen keeps nothing of a reading; the app hands it everything it pa
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING, cast
+
 from textual.screen import Screen
 
 from ..drawing.glyphs import ASCII, Glyphs
@@ -12,12 +14,16 @@ from ..messages import View
 from ..palette import PLAIN, Palette
 from ..widgets.rows import Rows
 
+if TYPE_CHECKING:
+    from ..app import BridgewrightApp
+
 __all__ = ["LiveScreen"]
 
 
 class LiveScreen(Screen[None]):
-    """A screen that shows readings as they come."""
+    """A screen that shows readings as they come. Its own part is `compose` and `draw`."""
 
+    AUTO_FOCUS = ""
     glyphs: Glyphs = ASCII
     palette: Palette = PLAIN
     first: View | None = None
@@ -28,6 +34,20 @@ class LiveScreen(Screen[None]):
         self.dress(self.palette)
         if self.first is not None:
             self.paint(self.first)
+
+    def on_screen_resume(self) -> None:
+        """Nothing was painted while another screen was on top, and the colours may be others."""
+        if self._view is not None:
+            self.owner.repaint()
+
+    @property
+    def owner(self) -> BridgewrightApp:
+        """The app, which a key asks to do something."""
+        return cast("BridgewrightApp", self.app)
+
+    def rows(self, name: str) -> Rows:
+        """The widget of that name."""
+        return self.query_one(f"#{name}", Rows)
 
     def paint(self, view: View) -> None:
         """Show `view` from now on."""

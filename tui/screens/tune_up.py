@@ -6,7 +6,7 @@ One rule: the eye needs one place only. The scale and the trail are large; all e
 from __future__ import annotations
 
 import math
-from typing import TYPE_CHECKING, ClassVar, cast
+from typing import ClassVar
 
 from textual.app import ComposeResult
 from textual.binding import Binding, BindingType
@@ -25,9 +25,6 @@ from ..widgets.prompt import Prompt
 from ..widgets.rows import Rows
 from .live import LiveScreen
 
-if TYPE_CHECKING:
-    from ..app import BridgewrightApp
-
 __all__ = ["KEYS", "TuneUp", "limits_from"]
 
 #: Key, words, words for a narrow screen and action, in the order of the bottom line. Without words it is not shown
@@ -35,13 +32,14 @@ __all__ = ["KEYS", "TuneUp", "limits_from"]
 KEYS = (
     ("f", "frequency", "freq", "screen.ask_frequency"),
     ("b", "forget best", "best", "screen.forget_best"),
-    ("a", "alarm limits", "limits", "screen.ask_limits"),
+    ("a", "alarm", "", "screen.ask_limits"),
     ("z", "", "", "screen.take_zero"),
     ("d", "dark/light", "", "app.toggle_dark"),
+    ("s", "screens", "screen", "app.next_screen"),
     ("?", "help", "help", "app.help"),
     ("q", "quit", "quit", "app.quit"),
 )
-_GAP_S, _GAP_PERIODS = 0.35, 3.0  # a longer time without a reading breaks the thread
+_GAP_S = 0.35  # a longer time without a reading breaks the thread, unless they come more slowly anyway
 _RIBBON_SHRINKS_BELOW = 0.3  # of its length, and only while the key is up
 
 
@@ -51,7 +49,6 @@ class TuneUp(LiveScreen):
     BINDINGS: ClassVar[list[BindingType]] = [
         Binding(key, action, words) for key, words, _, action in KEYS if action.startswith("screen.")
     ]
-    AUTO_FOCUS = ""
     #: A short screen gives its blank lines to the trail.
     VERTICAL_BREAKPOINTS = [(0, "-short"), (23, "-high")]  # noqa: RUF012  the library declares it so
 
@@ -76,24 +73,24 @@ class TuneUp(LiveScreen):
 
     def _draw_edges(self, view: View, readout: Readout, relation: Relation) -> None:
         width, glyphs = self._width, self.glyphs
-        self._rows("status").show([draw_status(view.snapshot, view.key, view.limits, width, glyphs)])
-        self._rows("remarks").show([draw_remarks(readout, view.snapshot, width, glyphs)])
-        self._rows("best").show([draw_best(relation, readout.stale, width, glyphs)])
-        self._rows("alarm").show([draw_alarm(view.alarm, view.limits, width)])
+        self.rows("status").show([draw_status(view.snapshot, view.key, view.limits, width, glyphs)])
+        self.rows("remarks").show([draw_remarks(readout, view.snapshot, width, glyphs)])
+        self.rows("best").show([draw_best(relation, readout.stale, width, glyphs)])
+        self.rows("alarm").show([draw_alarm(view.alarm, view.limits, width)])
 
     def _draw_reading(self, view: View, readout: Readout, relation: Relation) -> None:
         width, glyphs = self._width, self.glyphs
         direction = None if view.stale else relation.direction
-        self._rows("head").show(draw_head(readout, silence(view), direction, width, glyphs))
+        self.rows("head").show(draw_head(readout, silence(view), direction, width, glyphs))
         role = "over" if "SWR" in view.alarm.over else ""
         scale = draw_scale(readout.rho, width, glyphs, stale=readout.stale, limit_rho=view.limits.rho, alarm=role)
-        self._rows("scale").show(scale)
+        self.rows("scale").show(scale)
         self._fit_ribbon(readout.forward.value, view)
-        self._rows("ribbon").show(draw_ribbon(readout, self._ribbon_w, width, glyphs))
+        self.rows("ribbon").show(draw_ribbon(readout, self._ribbon_w, width, glyphs))
 
     def _draw_trail(self, view: View, relation: Relation) -> None:
-        trail = self._rows("trail")
-        gap_s = max(_GAP_S, _GAP_PERIODS * view.snapshot.period_ms / 1000.0)
+        trail = self.rows("trail")
+        gap_s = max(_GAP_S, view.lasting_s)
         rows = draw_trail(view.trail.bins(), view.now_s, *trail.size, self.glyphs, best_rho=relation.best, gap_s=gap_s)
         trail.show(rows)
 
@@ -104,7 +101,7 @@ class TuneUp(LiveScreen):
 
     def action_ask_limits(self) -> None:
         """Ask for the limits of the alarms."""
-        limits = cast("BridgewrightApp", self.app).limits
+        limits = self.owner.limits
         question = "alarm at SWR, watts, seconds:" if self.size.width >= 60 else "SWR, W, s:"
         self.query_one(Prompt).ask(question, limits_text(limits), self._use_limits)
 
@@ -116,15 +113,15 @@ class TuneUp(LiveScreen):
 
     def action_take_zero(self) -> None:
         """Take the running dark count as zero, or go back to the calibration's."""
-        cast("BridgewrightApp", self.app).toggle_zero()
+        self.owner.toggle_zero()
 
     def _use_frequency(self, text: str) -> None:
         from calibration.units import frequency_hz  # numpy comes with it
 
-        cast("BridgewrightApp", self.app).set_frequency(frequency_hz(text))
+        self.owner.set_frequency(frequency_hz(text))
 
     def _use_limits(self, text: str) -> None:
-        cast("BridgewrightApp", self.app).set_limits(limits_from(text))
+        self.owner.set_limits(limits_from(text))
 
     def _fit_ribbon(self, forward_w: float, view: View) -> None:
         """Longer at once when needed, at least as long as the limit; shorter only while the key is up."""
@@ -139,10 +136,7 @@ class TuneUp(LiveScreen):
     @property
     def _width(self) -> int:
         """Cells of a row; before the first layout those that it will have."""
-        return self._rows("trail").size.width or self.size.width
-
-    def _rows(self, name: str) -> Rows:
-        return self.query_one(f"#{name}", Rows)
+        return self.rows("trail").size.width or self.size.width
 
 
 def silence(view: View) -> str:

@@ -43,11 +43,10 @@ class KeyBar(Rows):
 
 def draw_keys(keys: Sequence[Key], width: int) -> tuple[Row, list[tuple[int, int, str]]]:
     """The line, and for each key the cells it covers with its action. A narrow line has fewer and shorter words."""
-    texts = [(key, words, action) for key, words, _, action in keys if words]
-    gap = 3
-    if _length(texts, gap) > width:
-        texts = [(key, brief, action) for key, _, brief, action in keys if brief]
-        gap = 2 if _length(texts, 2) <= width else 1
+    full = [(key, words, action) for key, words, _, action in keys if words]
+    brief = [(key, words, action) for key, _, words, action in keys if words]
+    ways = ((full, 3), (full, 2), (brief, 2), (brief, 1))
+    texts, gap = next(((texts, gap) for texts, gap in ways if _length(texts, gap) <= width), ways[-1])
     line, at, places = Line(width), 0, []
     for key, words, action in texts:
         line.put_row(at, ((key, "key"), (f" {words}", "quiet")))
