@@ -21,6 +21,7 @@ INSIDE_ONLY = {
     "calibration/laws/log.py": {"scipy"},
     "calibration/laws/table.py": {"scipy"},
     "bridgeio/report.py": {"matplotlib"},
+    "bridgeio/bridge_pictures.py": {"matplotlib"},
 }
 MODULES = [path for floor in FLOORS for path in sorted((ROOT / floor).rglob("*.py"))]
 

@@ -14,7 +14,7 @@ from bridgeio.errors import FileError, LinkError
 from bridgeio.lines import PatternError
 from calibration import __version__
 from calibration.errors import SheetError, UnitError
-from tests import shed
+from tests import fitted, known_loads, shed
 from tui.__main__ import main
 from tui.commands import COMMANDS
 
@@ -123,10 +123,15 @@ def test_command_has_what_a_command_has(name, capsys):
 
 @pytest.mark.parametrize("name", sorted(set(COMMANDS) - {"watch"}))
 def test_example_runs(name, tmp_path, monkeypatch, capsys):
-    """The example of a command's help runs as it stands, in a folder with a bench sheet."""
+    """The example of a command's help runs as it stands, in a folder with a bench sheet, fit, steps and journal."""
     sheet = (shed.FOLDER / "shed12.bench.toml").read_text(encoding="utf-8")
     (tmp_path / "shed.bench.toml").write_text(sheet, encoding="utf-8")
+    (tmp_path / "shed.bridge.toml").write_text(fitted.bridge_text(12), encoding="utf-8")
+    (tmp_path / "second.bench.toml").write_text(known_loads.sheet_text(known_loads.load_steps()), encoding="utf-8")
     monkeypatch.chdir(tmp_path)
+    if name in ("export", "report"):
+        assert main(["keep", "sim:duration=2&pace=fast", "try.journal"]) == 0
+        capsys.readouterr()
     monkeypatch.setattr("calibration.fit.fit", lambda *_, **__: shed.fitted(12))
     program, *words = importlib.import_module(COMMANDS[name].module).EXAMPLE.split()
     assert program == "bridgewright"

@@ -26,7 +26,10 @@ COMMANDS: dict[str, Command] = {
         Command("watch", "the live screen: tune up by it", "tui.commands.watch"),
         Command("stream", "readings as JSON lines or CSV on standard output", "tui.commands.stream"),
         Command("keep", "an unattended journal of what the bridge sends", "tui.commands.keep"),
+        Command("export", "a journal as readings, JSON lines or CSV", "tui.commands.export"),
+        Command("report", "what a journal or a bridge file holds, and what it lacks", "tui.commands.report"),
         Command("fit", "fit a bench sheet: from measured steps to a calibrated bridge", "tui.commands.fit"),
+        Command("verify", "judge a bridge file by known loads it was not fitted on", "tui.commands.verify"),
         Command("ports", "what is plugged in; with --listen, which port is a bridge", "tui.commands.ports"),
         Command(
             "firmware", "write the firmware kit (C encoder, example, make file) to a folder", "tui.commands.firmware"
