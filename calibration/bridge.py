@@ -28,6 +28,7 @@ class Band:
     covariance: of (ln forward gain, ln reflected gain, forward law parameters, reflected law parameters), without
     the reference's own accuracy. Limits are 95 %. angle_cosine: cos(arg d + arg c), the least favourable within its
     95 % limits, or -1 where no loads behind line have identified it. interpolated: made from its two neighbours.
+    directivity_least: the truth is known not to leak less; 0 for a bridge that was fitted.
     """
 
     frequency_hz: float
@@ -40,6 +41,7 @@ class Band:
     angle_cosine: float = -1.0
     covariance: Array = field(default_factory=lambda: np.zeros((8, 8)))
     interpolated: bool = False
+    directivity_least: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -96,12 +98,14 @@ def _between(low: Band, high: Band, frequency_hz: float) -> Band:
         for name in ("directivity", "directivity_limit", "forward_leak", "forward_leak_limit")
     }
     worst = min(low.angle_cosine, high.angle_cosine)
+    least = min(low.directivity_least, high.directivity_least)
     return replace(
         low,
         frequency_hz=frequency_hz,
         angle_cosine=worst,
         covariance=covariance,
         interpolated=True,
+        directivity_least=least,
         **gains,
         **larger,
     )

@@ -82,16 +82,18 @@ def rho_interval(
     d: npt.ArrayLike,
     c: npt.ArrayLike,
     angle_cosine: npt.ArrayLike = -1.0,
+    d_least: npt.ArrayLike = 0.0,
 ) -> tuple[Array, Array]:
     """95 % interval of rho; all arguments broadcast to one shape.
 
     ratio_low, ratio_high: M less and plus the 95 % limit of what is fixed in it (law, balance). noise: sd of
     M F - R over F (converter). d, c: |d|, |c| at their own 95 % limits. angle_cosine: cos(arg d + arg c) where
-    loads behind line have identified it, else -1, the worst.
+    loads behind line have identified it, else -1, the worst. d_least: |d| is not below this; 0 where nobody knows.
     """
-    low_m, high_m, s, d, c, psi = np.broadcast_arrays(ratio_low, ratio_high, noise, d, c, angle_cosine)
+    arrays = np.broadcast_arrays(ratio_low, ratio_high, noise, d, c, angle_cosine, d_least)
+    low_m, high_m, s, d, c, psi, least = arrays
     # |d| is a limit and the truth may leak less: where little is measured less leakage allows a larger upper end.
-    ends = _ends(np.stack([low_m, high_m, high_m]), s, np.stack([d, d, 0.0 * d]), c, psi)
+    ends = _ends(np.stack([low_m, high_m, high_m]), s, np.stack([d, d, least]), c, psi)
     return ends[0], np.asarray(ends[1:].max(axis=0))
 
 

@@ -31,11 +31,12 @@ _WIRE_FORWARD_CLIPPED, _WIRE_REFLECTED_CLIPPED = 1, 2
 NO_CARRIER_SD, BELOW_READING_SD = 4.0, 3.0
 #: At 99 % of full scale a detector is taken as clipped, whatever the frame says.
 CLIPPED_PART = 0.99
+_LIMITS = ("directivity_limit", "forward_leak_limit", "angle_cosine", "directivity_least")
 
 
 @dataclass(frozen=True, slots=True)
 class BandTerms:
-    """What bands say, as arrays over them [B]: gains squared, (d, c) best and (d, c, cosine) limits, covariance."""
+    """What bands say, as arrays over them [B]: gains squared, (d, c) best, (d, c, cosine, least d) limits, covariance."""
 
     gain_forward_squared: Array
     gain_reflected_squared: Array
@@ -50,7 +51,7 @@ class BandTerms:
             np.square([band.gain_forward for band in bands]),
             np.square([band.gain_reflected for band in bands]),
             np.array([(band.directivity, band.forward_leak) for band in bands]).T,
-            np.array([(band.directivity_limit, band.forward_leak_limit, band.angle_cosine) for band in bands]).T,
+            np.array([[getattr(band, name) for name in _LIMITS] for band in bands]).T,
             np.stack([band.covariance for band in bands]),
         )
 
@@ -153,7 +154,7 @@ class Look:
             noise_m = np.hypot(noises[1] / forward_w, ratio * noise_f)
         bound = np.maximum(forward_w, 0.0) + forward_limit + NORMAL_DEVIATE * noises[0]
         highest = np.where(edges.forward_clipped, np.inf, forward_w + forward_limit)
-        d, c, cosine = limits
+        d, c, cosine, least = limits
         shown = ~np.isnan(ratio)
         return Terms(
             forward_low_w=np.where(edges.silent, 0.0, forward_w - forward_limit),
@@ -165,6 +166,7 @@ class Look:
             directivity=d,
             leak=np.where(edges.silent, 0.0, c),
             angle_cosine=cosine,
+            directivity_least=least,
         )
 
     def _fixed_limits(

@@ -6,7 +6,7 @@ counts cannot carry is flagged and blank.
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import fields, replace
 from functools import lru_cache
 
 import numpy as np
@@ -161,7 +161,7 @@ def uncalibrated(
     columns = {"forward_counts": nf, "reflected_counts": nr, "frequency_hz": blank}
     columns |= {"forward_w": blank, "rho": blank, "reflected_w": blank}
     bits = _outside_bits(nf.shape, checked, simulated) | np.uint32(flag.bit("uncalibrated"))
-    return Readings(columns, bits, Terms(*([blank[None, :]] * 9)), beyond_open=np.zeros(nf.shape, dtype=bool))
+    return Readings(columns, bits, Terms(*([blank[None, :]] * len(fields(Terms)))), beyond_open=np.zeros(nf.shape, dtype=bool))
 
 
 def _outside_bits(shape: tuple[int, ...], checked: bool, simulated: bool) -> Bits:

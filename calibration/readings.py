@@ -32,7 +32,8 @@ class Terms:
 
     forward_low_w, forward_high_w: linearised forward power less and plus the 95 % limit of its scale and law [W];
     forward_noise: converter's sd of it, relative. ratio_low, ratio_high: M = R/F less and plus the 95 % limit of its
-    law and balance; ratio_noise: sd of M F - R over F. directivity, leak, angle_cosine: as in `Band`, at their limits.
+    law and balance; ratio_noise: sd of M F - R over F. directivity, leak, angle_cosine, directivity_least: as in `Band`,
+    at their limits.
     What is unbounded (a clipped detector) is 0 below and infinite above.
     """
 
@@ -45,6 +46,7 @@ class Terms:
     directivity: Array
     leak: Array
     angle_cosine: Array
+    directivity_least: Array
 
     def at(self, rows: slice) -> Terms:
         """The same terms for some of the n readings."""
@@ -187,7 +189,8 @@ class Readings:
             low, _ = hard_bound(np.sqrt(np.maximum(lowest, 0.0)), t.directivity, t.leak)
             _, high = hard_bound(np.sqrt(np.maximum(highest, 0.0)), t.directivity, t.leak)
         else:
-            low, high = rho_interval(t.ratio_low, t.ratio_high, t.ratio_noise, t.directivity, t.leak, t.angle_cosine)
+            leaks = t.directivity, t.leak, t.angle_cosine, t.directivity_least
+            low, high = rho_interval(t.ratio_low, t.ratio_high, t.ratio_noise, *leaks)
         return _finite(np.fmin.reduce(low, axis=0)), _finite(np.fmax.reduce(high, axis=0))
 
     @cached_property
