@@ -19,6 +19,7 @@ import numpy as np
 from calibration import flags as flag
 
 from .desk import TimedReadings
+from .visible import visible
 
 __all__ = ["COLUMNS", "FORMATS", "csv_header", "csv_rows", "json_rows", "rfc3339"]
 
@@ -85,7 +86,7 @@ def _cell(value: Any) -> str:
         return ""
     if not isinstance(value, str):
         return " ".join(value) if isinstance(value, tuple) else str(value)
-    text = "".join(char if char.isprintable() else char.encode("unicode_escape").decode("ascii") for char in value)
+    text = visible(value)
     if text.startswith(_FORMULA):
         text = f"'{text}"
     return f'"{text.replace(chr(34), chr(34) * 2)}"' if "," in text or '"' in text else text
