@@ -1,41 +1,29 @@
 """The fit: a bench sheet's steps to a calibrated bridge with limits, and what the steps could not carry.
 
 One rule: what the steps do not determine is not reported as known; it gets a bound and a sentence that says so.
-scipy is imported inside functions, as it costs more than half a second.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING
+from functools import partial
 
 import numpy as np
-import numpy.typing as npt
 
 from .bench import BenchRatings, BenchStep
 from .bridge import Bridge
-from .errors import SheetError
+from .fit_demands import demand_power_in_bands, demand_usable, demand_whole, enough_without
 from .fit_model import BenchModel
-from .fit_start import start_vectors
+from .fit_notes import check_words, fit_notes
+from .fit_search import Solution, first_minimum, scatter_of, solve
 from .laws import LAWS
 from .leak_limits import band_of_fit, with_neighbours
+from .loads import LoadPart, load_impedance_ohm
+from .slips import Slip, evident, refuse_turned, without_slips
 from .units import power_from_volts_w
 from .warmth import DiodeKind
 
-__all__ = ["Fit", "Solution", "StepResidual", "fit", "scatter_of", "solve"]
-
-if TYPE_CHECKING:
-    from scipy.optimize import OptimizeResult
-
-Array = npt.NDArray[np.float64]
-
-#: A bench that determines its parameters settles in some tens of steps; one that does not would wander for ever.
-_MOST_STEPS = 400
-#: A wattmeter repeats no better than this from step to step [relative sd of power]; nor, unknown, worse.
-_SCATTER_FLOOR = 0.002
-_SCATTER_START = 0.01
-_SCATTER_MOST = 0.05
+__all__ = ["Fit", "LoadFound", "Slip", "Solution", "StepResidual", "fit", "scatter_of", "solve"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,14 +36,36 @@ class StepResidual:
 
 
 @dataclass(frozen=True, slots=True)
+class LoadFound:
+    """A load part as the fit found it: error and its sd [%], the tolerance given [%], inductance, capacitance."""
+
+    text: str
+    error_pct: float
+    error_sd_pct: float
+    tolerance_pct: float
+    nh: float
+    pf: float
+
+
+@dataclass(frozen=True, slots=True)
 class Fit:
-    """Outcome of a fit: the bridge, the wattmeter's scatter (relative sd), residuals by step, and sentences."""
+    """Outcome of a fit: the bridge, the wattmeter's scatter (relative sd), residuals by step, and sentences.
+
+    slips: steps set aside, also the first of the notes. loads: the parts as found. checks: closed forms beside the fit.
+    """
 
     bridge: Bridge
     reference_scatter: float
     residuals: tuple[StepResidual, ...]
     chi_square_per_residual: float
     notes: tuple[str, ...]
+    slips: tuple[Slip, ...] = ()
+    loads: tuple[LoadFound, ...] = ()
+    checks: tuple[str, ...] = ()
+
+
+#: What is done with a slip.
+_ASIDE = "; set aside in this fit, it stays in the sheet"
 
 
 def fit(
@@ -69,21 +79,21 @@ def fit(
     match_return_loss_db: float | None = None,
     device_id: int | None = None,
     diode: DiodeKind | None = None,
+    seed: int | None = None,
 ) -> Fit:
     """Fit laws, gains and leakage of a bridge with detectors of one kind (a name in LAWS) to bench steps.
 
+    seed: moves the search's starts at random; the outcome does not depend on it where the steps determine it.
     SheetError where the steps cannot carry a fit at all, UnitError where a load cannot be read.
     """
     ratings = ratings or BenchRatings()
     usable = [_with_power(step, z0_ohm) for step in steps]
-    _demand(usable)
-    model = BenchModel(usable, ratings, z0_ohm, LAWS[detector])
-    _demand_power_in_bands(model)
-    solution = solve(model)
+    model, solution, slips = _solved(usable, ratings, z0_ohm, detector, full_scale, seed)
     vector = solution.vector
     forward, reflected = model.laws(vector)
     found = [
-        band_of_fit(model, vector, solution.covariance, band, match_return_loss_db) for band in range(len(model.bands))
+        band_of_fit(model, vector, solution.covariance, band, match_return_loss_db, solution.others)
+        for band in range(len(model.bands))
     ]
     bridge = Bridge(
         name=name,
@@ -100,12 +110,41 @@ def fit(
         temperature_c=float(np.mean([s.temperature_c for s in steps])),
         temperature_span_c=float(np.ptp([s.temperature_c for s in steps])),
     )
-    sigmas = model.residuals(vector)[: len(model.residual_steps)]
-    residuals = tuple(
-        StepResidual(step, what, float(value)) for (step, what), value in zip(model.residual_steps, sigmas, strict=True)
+    residuals = _residuals(model, vector)
+    aside = {step for slip in slips for step in slip.steps}
+    used = [residual.sigmas for residual in residuals if residual.step not in aside]
+    notes = tuple(f"{slip.words}{_ASIDE}" for slip in slips) + fit_notes(
+        model, solution, bridge, [known for _, known in found]
     )
-    notes = _notes(model, [known for _, known in found], solution.settled)
-    return Fit(bridge, model.scatter, residuals, float(np.mean(sigmas**2)), notes)
+    return Fit(
+        bridge,
+        model.scatter,
+        residuals,
+        float(np.mean(np.square(used))),
+        notes,
+        slips=tuple(slips),
+        loads=_loads(model, solution),
+        checks=check_words(model, solution, bridge),
+    )
+
+
+def _solved(
+    steps: list[BenchStep], ratings: BenchRatings, z0_ohm: float, detector: str, full_scale: int, seed: int | None
+) -> tuple[BenchModel, Solution, list[Slip]]:
+    """The model of the steps, its solution, and the slips that have been set aside."""
+    demand_whole(steps)
+    refuse_turned(steps, z0_ohm)
+    slips = evident(steps, full_scale)
+    demand_usable(steps, slips)
+    known = frozenset(step for slip in slips for step in slip.steps)
+
+    def make(given: list[BenchStep], aside: frozenset[int], freed: frozenset[LoadPart]) -> BenchModel:
+        return BenchModel(given, ratings, z0_ohm, LAWS[detector], aside=aside, freed=freed)
+
+    model = make(steps, known, frozenset())
+    demand_power_in_bands(model)
+    model, solution, others = without_slips(make, model, first_minimum(model, seed), partial(enough_without, model))
+    return model, solution, [*slips, *others]
 
 
 def _with_power(step: BenchStep, z0_ohm: float) -> BenchStep:
@@ -116,98 +155,26 @@ def _with_power(step: BenchStep, z0_ohm: float) -> BenchStep:
     return replace(step, power_w=power_from_volts_w(step.volts, step.volts_kind or "rms", ohm))
 
 
-def _demand(steps: list[BenchStep]) -> None:
-    """Raise SheetError where there is too little to fit anything."""
-    kinds = [step.kind for step in steps]
-    if "dark" not in kinds:
-        raise SheetError(
-            "the sheet has no dark step; wanted one with the transmitter off, since every law starts at the dark count"
-        )
-    if kinds.count("power") < 3:
-        raise SheetError(
-            f"the sheet has {kinds.count('power')} power steps; wanted at least 3 at different powers into the dummy "
-            "load, as a detector law has a scale, a load term and a gain"
-        )
-    for number, step in enumerate(steps, 1):
-        if step.kind in ("power", "reversed") and not (step.power_w and step.power_w > 0.0):
-            raise SheetError(f"step {number} ({step.kind}) has no power_w or volts; wanted the wattmeter's reading")
-        if step.kind != "dark" and step.frequency_hz is None:
-            raise SheetError(f"step {number} ({step.kind}) has no frequency_hz; wanted the frequency it was taken at")
-        if step.kind in ("power", "load") and step.forward <= _dark_mean(steps):
-            raise SheetError(
-                f"step {number} ({step.kind}) has forward {step.forward:g} counts, not above the dark count; was the "
-                "transmitter on, and is forward the detector that sees the transmitter?"
-            )
+def _loads(model: BenchModel, solution: Solution) -> tuple[LoadFound, ...]:
+    """Resistors as found; of an open or a short there is no error to tell."""
+    sds = np.sqrt(np.diag(solution.covariance))
+    found = []
+    for number, part in enumerate(model.parts):
+        at = model.loads_slice.start + 3 * number
+        error, nh, pf = (float(value) for value in solution.vector[at : at + 3])
+        if load_impedance_ohm(part.text) not in (0.0, complex(np.inf)):
+            found.append(LoadFound(part.text, 100.0 * error, 100.0 * float(sds[at]), part.pct, nh, pf))
+    return tuple(found)
 
 
-def _demand_power_in_bands(model: BenchModel) -> None:
-    """Raise SheetError where a band has no known power: its gain would hang in the air."""
-    with_power = set(model.band[model.of_kind["power"]].tolist())
-    for band, hz in enumerate(model.bands):
-        if band not in with_power:
-            raise SheetError(
-                f"there are steps at {hz / 1e6:.3f} MHz but no power step; wanted at least one with a known power into "
-                "the dummy load there, as it gives the band its gain"
-            )
-
-
-def _dark_mean(steps: list[BenchStep]) -> float:
-    return float(np.mean([step.forward for step in steps if step.kind == "dark"]))
-
-
-@dataclass(frozen=True, slots=True)
-class Solution:
-    """Best vector of a model, its covariance, its cost, and whether the search came to rest."""
-
-    vector: Array
-    covariance: Array
-    settled: bool
-
-
-def solve(model: BenchModel) -> Solution:
-    """Best vector over all starts; the laws and the wattmeter's scatter of `model` are refined on the way."""
-    best = min((_descend(model, start) for start in start_vectors(model)), key=lambda found: float(found.cost))
-    for _ in range(4):
-        before = model.scatter
-        model.refine_laws(best.x)
-        model.scatter = scatter_of(model, best.x)
-        best = _descend(model, best.x)
-        if abs(model.scatter - before) < 0.02 * before:
-            break
-    jacobian = _jacobian(model.residuals)(best.x)
-    covariance = np.asarray(np.linalg.inv(jacobian.T @ jacobian), dtype=float)
-    return Solution(np.asarray(best.x), (covariance + covariance.T) / 2.0, best.status > 0)
-
-
-def _descend(model: BenchModel, start: Array) -> OptimizeResult:
-    from scipy.optimize import least_squares
-
-    jacobian = _jacobian(model.residuals)
-    return least_squares(model.residuals, start, jac=jacobian, method="lm", x_scale="jac", max_nfev=_MOST_STEPS)
-
-
-def _jacobian(residuals: Callable[[Array], Array]) -> Callable[[Array], Array]:
-    """Central differences of `residuals`, all parameters in one evaluation."""
-
-    def jacobian(vector: Array) -> Array:
-        step = 1e-6 * np.maximum(np.abs(vector), 1e-2)
-        moved = np.diag(step)
-        rise = residuals(vector + moved) - residuals(vector - moved)
-        return np.asarray((rise / (2.0 * step[:, None])).T)
-
-    return jacobian
-
-
-def scatter_of(model: BenchModel, vector: Array) -> float:
-    """The wattmeter's scatter from its residuals, less the freedom they have given to laws and gains."""
+def _residuals(model: BenchModel, vector: np.ndarray) -> tuple[StepResidual, ...]:
+    """All steps against the fit, those set aside too."""
+    weights, model.weights = model.weights, np.ones(len(model.steps))
     sigmas = model.residuals(vector)[: len(model.residual_steps)]
-    of_power = np.array([what == "power" for _, what in model.residual_steps])
-    jacobian = _jacobian(model.residuals)(vector)
-    hat = np.einsum("ij,jk,ik->i", jacobian, np.linalg.inv(jacobian.T @ jacobian), jacobian)
-    free = float(np.sum(1.0 - hat[: len(sigmas)][of_power]))
-    if free < 1.0:
-        return model.scatter
-    return float(np.clip(model.scatter * np.sqrt(np.sum(sigmas[of_power] ** 2) / free), _SCATTER_FLOOR, _SCATTER_MOST))
+    model.weights = weights
+    return tuple(
+        StepResidual(step, what, float(value)) for (step, what), value in zip(model.residual_steps, sigmas, strict=True)
+    )
 
 
 def _typical(sds: list[float]) -> float:
@@ -221,16 +188,3 @@ def _reference_pct(steps: list[BenchStep], ratings: BenchRatings) -> float:
         return float(np.median(own))
     powers = [s.power_w for s in steps if s.kind == "power" and s.power_w is not None]
     return ratings.reference_pct * ratings.reference_full_scale_w / max(powers)
-
-
-def _notes(model: BenchModel, identified: list[bool], settled: bool) -> tuple[str, ...]:
-    """What the steps left open, as sentences."""
-    said = [] if settled else ["the fit did not come to rest: these steps do not determine all that it looks for"]
-    if len(model.of_kind["reversed"]) == 0:
-        said.append("no reversed step: the reflected detector's law leans on the forward one's")
-    if len(model.of_kind["load"]) == 0:
-        said.append("no load step: the balance of the two detectors rests on the wattmeter alone")
-    for hz, known in zip(model.bands, identified, strict=True):
-        if not known:
-            said.append(f"{hz / 1e6:.3f} MHz: the loads do not identify the forward port's leak; a bound stands in")
-    return tuple(said)

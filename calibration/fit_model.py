@@ -19,11 +19,11 @@ from .bench import STEP_KINDS, BenchRatings, BenchStep
 from .bridge import BAND_REACH
 from .errors import SheetError
 from .laws import Law
-from .loads import load_impedance_ohm, load_reflection, part_of
+from .loads import LoadPart, load_impedance_ohm, load_reflection, part_of
 from .meter import counting_sd
 from .reflection import rho_from_return_loss
 
-__all__ = ["BenchModel", "group_bands"]
+__all__ = ["BAND_SIZE", "LEAK_SD", "BenchModel", "group_bands"]
 
 Array = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
@@ -37,13 +37,17 @@ COUNT_PART = 5e-4
 
 # Priors (mean, sd): wide enough that a usable bench overrules them, narrow enough that what it leaves open stays
 # physical. A leak of 0.1 is a directivity of 20 dB.
-_LEAK_SD = 0.1
+LEAK_SD = 0.1
 #: ln of reflected over forward gain: both sides of a coupler are usually built alike (common practice).
 _BALANCE_SD = 0.35
 #: The bridge's own loss between the reflected detector and the wattmeter [dB] (a 20-30 dB coupler; common practice).
 _OWN_LOSS = (0.05, 0.04)
 _LINE_DEG_SD = 0.5
+#: Relative sd of a resistance of which only the order is believed.
+_FREED_SD = 0.5
 _LINE_LOSS_DB = 0.05
+#: The laws' squares at that many sets of vectors are kept: a Jacobian, and where it was taken, for both sides.
+_KEPT_SQUARES = 6
 
 
 def group_bands(steps: list[BenchStep]) -> list[float]:
@@ -63,15 +67,29 @@ class BenchModel:
     Vectors have shape (..., size): many are evaluated at once, which is what makes the fit's Jacobian cheap.
     """
 
-    def __init__(self, steps: list[BenchStep], ratings: BenchRatings, z0_ohm: float, kind: type[Law]) -> None:
-        """Sort `steps` into bands, load parts and lines, and find first laws of `kind`.
+    def __init__(
+        self,
+        steps: list[BenchStep],
+        ratings: BenchRatings,
+        z0_ohm: float,
+        kind: type[Law],
+        *,
+        aside: frozenset[int] = frozenset(),
+        freed: frozenset[LoadPart] = frozenset(),
+        laws: tuple[Law, Law] | None = None,
+    ) -> None:
+        """Sort `steps` into bands, load parts and lines, and find first laws of `kind`, or take `laws` for them.
 
+        aside: steps that say nothing in this model. freed: parts whose resistance counts as unknown.
         UnitError where a load cannot be read, SheetError where the powers do not carry such a law.
         """
         self.steps = steps
         self.ratings = ratings
         self.z0_ohm = z0_ohm
         self.scatter = 0.01  # the wattmeter's scatter from step to step, relative sd of power
+        # A factor on the residuals of each step.
+        self.weights = np.where(np.isin(np.arange(len(steps)), list(aside)), 0.0, 1.0)
+        self.freed = freed
         self.bands = group_bands(steps)
         self.band = np.array([self._band_of(step) for step in steps], dtype=int)
         self.of_kind = {kind: np.flatnonzero([s.kind == kind for s in steps]) for kind in STEP_KINDS}
@@ -90,7 +108,8 @@ class BenchModel:
             np.array([float(counting_sd(getattr(s, sd), s.samples)) for s in steps])
             for sd in ("forward_sd", "reflected_sd")
         ]
-        self.first_laws = self._first_laws(kind)
+        self._known_squares: dict[tuple[object, ...], tuple[Array, Array]] = {}
+        self.first_laws = laws or self._first_laws(kind)
         self._law_sizes = [len(law.parameters) for law in self.first_laws]
 
     @property
@@ -102,6 +121,11 @@ class BenchModel:
         """Where band `band` has its parameters."""
         start = self._bands_at + BAND_SIZE * band
         return slice(start, start + BAND_SIZE)
+
+    @property
+    def loads_slice(self) -> slice:
+        """Where load parts and lines have their parameters."""
+        return slice(self._parts_at, self.size)
 
     def law_slice(self, side: int) -> slice:
         """Where the forward (0) or reflected (1) law has its parameters."""
@@ -123,10 +147,12 @@ class BenchModel:
         incident, _ = self._incident(vector, self.of_kind["power"], dummy)
         through, _ = self._through(vector)
         for side, (kind, seen_w) in enumerate((("power", incident), ("reversed", through))):
-            at = self.of_kind[kind]
-            off_db = _DB * np.log(self._power[at] / seen_w)
+            used = self.weights[self.of_kind[kind]] > 0.0
+            at = self.of_kind[kind][used]
+            off_db = _DB * np.log(self._power[at] / seen_w[used])
             laws[side] = laws[side].refined(self._counts[side][at], off_db, _DB * self.scatter)
         self.first_laws = (laws[0], laws[1])
+        self._known_squares.clear()
 
     def leaks(self, vectors: Array, bands: Places) -> tuple[Complex, Complex, Complex]:
         """Complex d, c and dummy reflection in each of `bands`, shape (..., len(bands))."""
@@ -161,22 +187,54 @@ class BenchModel:
         _, load_reflections = self._forward_steps(vectors, loads, self.load_reflections(vectors))
         turned = self._wattmeter(self.of_kind["reversed"], *self._through(vectors))
         priors = self._prior_residuals(vectors)
-        return np.concatenate(
-            [*self._dark_steps(vectors), power, reflections, turned, load_reflections, priors], axis=-1
-        )
+        told = np.concatenate([*self._dark_steps(vectors), power, reflections, turned, load_reflections], axis=-1)
+        return np.concatenate([told * self.weights[self._residual_step], priors], axis=-1)
 
-    @property
+    @cached_property
     def residual_steps(self) -> list[tuple[int, str]]:
         """Step index and what is compared ("forward", "reflected", "power") of each residual before the priors."""
         kinds = [("dark", "forward"), ("dark", "reflected"), ("power", "power"), ("power", "reflected")]
         kinds += [("reversed", "power"), ("load", "reflected")]
         return [(int(step), what) for kind, what in kinds for step in self.of_kind[kind]]
 
+    @cached_property
+    def _residual_step(self) -> Places:
+        return np.array([step for step, _ in self.residual_steps], dtype=int)
+
+    @cached_property
+    def residual_bands(self) -> Places:
+        """The band whose own parameters each residual depends on, priors too; -1 where it depends on none's."""
+        _, sd = self.priors
+        of_parameter = np.full(self.size, -1)
+        for band in range(len(self.bands)):
+            of_parameter[self.band_slice(band)] = band
+        alike = np.full(int(np.isfinite(self.first_laws[0].likeness()).sum()), -1)
+        told = self.band[self._residual_step]
+        return np.concatenate([told, of_parameter[np.isfinite(sd)], alike, np.arange(len(self.bands))])
+
+    @cached_property
+    def has_loads(self) -> npt.NDArray[np.bool_]:
+        """Which bands have load steps, bool[bands]."""
+        return np.isin(np.arange(len(self.bands)), self.band[self.of_kind["load"]])
+
+    def turned(self, vector: Array) -> Array:
+        """The same fit with d + dummy real in bands without load steps: nothing there tells the leaks' angles."""
+        told = vector.copy()
+        for band in np.flatnonzero(~self.has_loads):
+            d, c, dummy = (complex(value[0]) for value in self.leaks(vector, np.array([band])))
+            turn = np.exp(-1j * np.angle(d + dummy))
+            start = self.band_slice(int(band)).start
+            pairs = [(value.real, value.imag) for value in (d * turn, c / turn, dummy * turn)]
+            told[start + 2 : start + 8] = np.ravel(pairs)
+        return told
+
     def reversed_leaks(self, vector: Array) -> dict[int, float]:
         """What the forward detector saw of the whole wave in each band's reversed steps: mean |leak| per band."""
         forward, reflected = self.laws(vector)
         seen: dict[int, list[float]] = {}
         for step in self.of_kind["reversed"]:
+            if self.weights[step] == 0.0:
+                continue
             at = int(self._band_at(self.band[step]))
             little = float(forward.square(self._counts[0][step])) / float(np.exp(2.0 * vector[at]))
             whole = float(reflected.square(self._counts[1][step])) / float(np.exp(2.0 * vector[at + 1]))
@@ -222,8 +280,17 @@ class BenchModel:
 
         Of the hundred vectors of a Jacobian a handful differ in the law, which is the costly part.
         """
-        counts, first = self._counts[side][at], self.first_laws[side]
         own = vectors[..., self.law_slice(side)]
+        key = (side, own.shape, own.tobytes())
+        if key not in self._known_squares:
+            if len(self._known_squares) >= _KEPT_SQUARES:
+                del self._known_squares[next(iter(self._known_squares))]
+            self._known_squares[key] = self._squares_of_all(own, side)
+        square, slope = self._known_squares[key]
+        return square[..., at], slope[..., at]
+
+    def _squares_of_all(self, own: Array, side: int) -> tuple[Array, Array]:
+        counts, first = self._counts[side], self.first_laws[side]
         if own.ndim == 1:
             law = first.with_parameters(own)
             return law.square(counts), law.slope(counts)
@@ -250,6 +317,7 @@ class BenchModel:
         found = []
         for side, step_kind in enumerate(("power", "reversed")):
             at = self.of_kind[step_kind]
+            at = at[self.weights[at] > 0.0]
             found.append(kind.start(self._counts[side][at], self._power[at], self.band[at], darks[side]))
         forward, reflected = found
         if forward is None:
@@ -307,7 +375,7 @@ class BenchModel:
             mean[self.law_slice(side)], sd[self.law_slice(side)] = law.priors()
         for band in range(len(self.bands)):
             at = self.band_slice(band).start
-            sd[at + 2 : at + 6] = _LEAK_SD
+            sd[at + 2 : at + 6] = LEAK_SD
             sd[at + 6 : at + 8] = self.dummy_limit / 2.0
             mean[at + 8], sd[at + 8] = _OWN_LOSS
         for number, part in enumerate(self.parts):
@@ -315,6 +383,8 @@ class BenchModel:
             # A tolerance is a limit: its sd is that of an even spread. Inductance and capacitance lie in 0..limit.
             mean[at : at + 3] = 0.0, part.nh / 2.0, part.pf / 2.0
             sd[at : at + 3] = np.array([2.0 * part.pct / 100.0, part.nh, part.pf]) / np.sqrt(12.0) + 1e-9
+            if part in self.freed:
+                sd[at] = _FREED_SD
         for number, (_, _, loss) in enumerate(self.lines):
             at = self._lines_at + 2 * number
             mean[at : at + 2] = 0.0, _LINE_LOSS_DB / 2.0 if loss is None else loss

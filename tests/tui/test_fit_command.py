@@ -42,7 +42,8 @@ def test_sheet_becomes_a_bridge_file(sheet, tmp_path, capsys):
     assert loaded.steps == load_bridge_file(sheet).steps
     for words in (
         "57 steps, 6 bands", "forward   detector: ", "reflected detector: ", " 14.200   ", "wattmeter: scatter ",
-        "residuals: ", "note: 1.900 MHz: the loads do not identify", f"written: {path}, fit id {loaded.fit_id:04X}",
+        "residuals: ", "cross-check: 3.700 MHz: balance by 25 and 100 ohm ",
+        "note: 1.900 MHz: the loads do not identify", f"written: {path}, fit id {loaded.fit_id:04X}",
     ):  # fmt: skip
         assert words in told.out
     assert told.err == "bridgewright fit: 57 steps of garden shed bridge (12 bit); this takes some seconds\n"
@@ -143,12 +144,13 @@ def test_output_that_cannot_be_written_is_3(quick, sheet, tmp_path, capsys, targ
     assert [path.name for path in tmp_path.iterdir()] == [sheet.name]
 
 
-def test_slip_of_the_hand_is_cautioned(sheet, capsys):
-    """A power typed ten times too large stands among the largest residuals, under a caution."""
+def test_slip_of_the_hand_is_named(sheet, capsys):
+    """A power typed ten times too large is named by its step and set aside, in lines of 80 columns at most."""
     text = sheet.read_text(encoding="utf-8")
     assert "power_w = 1.097\n" in text
     sheet.write_text(text.replace("power_w = 1.097\n", "power_w = 10.97\n"), encoding="utf-8")
     assert main(["fit", str(sheet)]) == 0
     out = capsys.readouterr().out
-    assert "  step   4 power    power " in out
-    assert "caution: the steps contradict each other beyond their noise" in out
+    assert "slip: step 4: power_w 10.97 looks mistyped: the counts fit 1.1 W" in out
+    assert "caution:" not in out
+    assert all(len(line) <= 80 for line in out.splitlines())

@@ -20,11 +20,6 @@ __all__ = ["EXAMPLE", "add_arguments", "run"]
 
 #: Residuals of this many times their expected variance are no noise.
 _CONTRADICTING = 4.0
-_CONTRADICT = (
-    "the steps cannot be fitted: they contradict each other or leave too much open; wanted in every band power steps "
-    "at different powers, each with counts of its own"
-)
-
 EXAMPLE = "bridgewright fit shed.bench.toml -o shed.bridge.toml"
 
 
@@ -40,12 +35,13 @@ def run(args: argparse.Namespace) -> int:
 
     from bridgeio.bridge_file import parse_bridge_file, sheet_text
     from bridgeio.fit_table import FitTable, write_fit
+    from bridgeio.sheet_fit import fit_of
 
     # Read once: what is fitted and what is written are then the same steps, whoever edits the file meanwhile.
     text = sheet_text(args.file)
     sheet = parse_bridge_file(text, args.file, steps_only=True)
     say(visible(f"bridgewright fit: {len(sheet.steps)} steps of {sheet.name}; this takes some seconds"))
-    found = _fitted(sheet)
+    found = fit_of(sheet)
     say("\n".join(visible(line) for line in _report(sheet, found)), sys.stdout)
     if args.output:
         table = FitTable.of_fit(found, datetime.now(UTC))
@@ -56,66 +52,57 @@ def run(args: argparse.Namespace) -> int:
     return 0
 
 
-def _fitted(sheet: BridgeFile) -> Fit:
-    """The fit of the sheet. SheetError also where its numbers run away, which steps that contradict each other do."""
-    import numpy as np
-
-    from calibration.errors import CalibrationError, SheetError
-    from calibration.fit import fit
-
-    try:
-        with np.errstate(all="ignore"):
-            found = fit(
-                list(sheet.steps),
-                name=sheet.name,
-                full_scale=sheet.full_scale,
-                z0_ohm=sheet.z0_ohm,
-                detector=sheet.detector,
-                ratings=sheet.ratings,
-                match_return_loss_db=sheet.match_return_loss_db,
-                device_id=sheet.device_id,
-                diode=sheet.diode,
-            )
-    except CalibrationError:
-        raise
-    except (ValueError, np.linalg.LinAlgError) as error:
-        raise SheetError(f"{_CONTRADICT} ({error})") from error
-    if not all(np.isfinite(band.covariance).all() for band in found.bridge.bands):
-        raise SheetError(_CONTRADICT)
-    return found
-
-
 def _report(sheet: BridgeFile, found: Fit) -> list[str]:
     bridge = found.bridge
     lines = [f"{bridge.name}: {len(sheet.steps)} steps, {len(bridge.bands)} bands", ""]
+    # The first notes are those of the slips.
+    slips, notes = found.notes[: len(found.slips)], found.notes[len(found.slips) :]
+    lines += _wrapped("slip: ", slips)
     for side, law in (("forward", bridge.forward_law), ("reflected", bridge.reflected_law)):
         lines.append(f"{side:9} detector: {law.words}")
-    lines += ["", "   MHz    directivity   return loss as on a dummy   forward leak   SWR 1.5 reads within"]
+    lines += ["", "           directivity   bound, as     forward leak   SWR 1.5"]
+    lines += ["    MHz    best value    return loss   bound          reads within"]
     lines += [_band_line(band) for band in bridge.bands]
+    lines += _load_lines(found)
+    lines += ["", *_wrapped("cross-check: ", found.checks)] if found.checks else []
     lines += ["", f"wattmeter: scatter {100 * found.reference_scatter:.2f} % from step to step; its own accuracy of"]
     lines += [f"{bridge.reference_pct:g} % is in every power, and in no SWR"]
-    worst = sorted(found.residuals, key=lambda r: -abs(r.sigmas))[:3]
+    aside = {step for slip in found.slips for step in slip.steps}
+    used = [residual for residual in found.residuals if residual.step not in aside]
+    worst = sorted(used, key=lambda r: -abs(r.sigmas))[:3]
     lines += [f"residuals: {found.chi_square_per_residual:.2f} per residual in units of expected variance; largest:"]
     lines += [f"  step {r.step + 1:3} {sheet.steps[r.step].kind:8} {r.what:9} {r.sigmas:+.1f} sd" for r in worst]
     if found.chi_square_per_residual > _CONTRADICTING:
-        lines += ["caution: the steps contradict each other beyond their noise: look for a slip in those above first"]
-    lines += [f"note: {note}" for note in found.notes]
-    return lines
+        lines += [
+            "caution: the steps contradict each other beyond their noise: look for a slip",
+            "in those above first",
+        ]
+    return lines + _wrapped("note: ", notes)
+
+
+def _load_lines(found: Fit) -> list[str]:
+    if not found.loads:
+        return []
+    lines = ["", "load, ohm   found error   of tolerance   inductance   capacitance"]
+    return lines + [
+        f"{load.text:>9}   {load.error_pct:+5.2f} +-{load.error_sd_pct:4.2f} %  {load.tolerance_pct:7g} %   "
+        f"{load.nh:9.1f} nH   {load.pf:8.1f} pF"
+        for load in found.loads
+    ]
+
+
+def _wrapped(label: str, sentences: tuple[str, ...]) -> list[str]:
+    """Each sentence in lines of at most 79 columns, the first after `label`."""
+    import textwrap
+
+    return [line for said in sentences for line in textwrap.wrap(label + said, 79, subsequent_indent="  ")]
 
 
 def _band_line(band: Band) -> str:
-    import numpy as np
-
-    from calibration.directivity import rho_interval
-    from calibration.reflection import rho_from_swr, swr_from_rho
+    from calibration.fit_notes import swr_span
     from calibration.units import wave_db
 
-    ratio = np.square(rho_from_swr(1.5))
-    low, high = rho_interval(ratio, ratio, 0.0, band.directivity_limit, band.forward_leak_limit, band.angle_cosine)
     best, limit = -float(wave_db(max(band.directivity, 1e-6))), -float(wave_db(band.directivity_limit))
-    swr = f"{float(swr_from_rho(low)):.2f}-{float(swr_from_rho(high)):.2f}"
     leak = -float(wave_db(band.forward_leak_limit))
-    return (
-        f"{band.frequency_hz / 1e6:7.3f}   {best:5.1f} dB      at least {limit:4.1f} dB{'':12} "
-        f"at least {leak:4.1f} dB   {swr}"
-    )
+    bounds = f"{best:5.1f} dB      {limit:5.1f} dB      {leak:5.1f} dB"
+    return f"{band.frequency_hz / 1e6:7.3f}     {bounds}       {swr_span(band)}"
