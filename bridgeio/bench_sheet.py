@@ -109,9 +109,7 @@ class BenchSheet:
     @property
     def limits(self) -> Limits:
         """The ratings that the file names."""
-        raw = tomllib.loads(sheet_text(self.path))
-        told = raw.get("bench", {}) | {"max_w": raw["bridge"].get("max_w")}
-        return Limits(**{one.name: told.get(one.name) for one in fields(Limits)})
+        return self.file.limits
 
     def append(self, step: BenchStep) -> BridgeFile:
         """Write `step` (rounded as `step_text` does) as the file's last; return the file as it then is, less [fit].

@@ -11,7 +11,7 @@ import re
 import shlex
 import tomllib
 from collections.abc import Iterator
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -19,6 +19,7 @@ from pydantic import AfterValidator, BaseModel, ConfigDict, Field, ValidationErr
 
 from calibration.bench import BenchRatings, BenchStep
 from calibration.bridge import Bridge
+from calibration.candidates import Limits
 from calibration.errors import UnitError
 from calibration.loads import load_impedance_ohm
 from calibration.warmth import DIODES, DiodeKind
@@ -32,6 +33,8 @@ __all__ = ["SCHEMA", "BridgeFile", "load_bridge_file", "parse_bridge_file", "she
 SCHEMA = 1
 #: A bench sheet of thousands of steps is still far below this [bytes].
 _MOST_BYTES = 16_000_000
+#: Keys of [bench] that bound what is proposed.
+_RATINGS = ("dummy_w", "dummy_j", "resistor_w", "power_min_w", "power_max_w")
 #: Faults told at once; with more of them it is another kind of file.
 _MOST_FAULTS = 50
 
@@ -54,6 +57,7 @@ class BridgeFile:
     reference_mv: int | None = None
     diode: DiodeKind | None = None
     fit_id: int | None = None
+    limits: Limits = field(default_factory=Limits)
 
     def calibrated(self) -> Bridge:
         """The fitted bridge. FileError for a sheet without [fit]."""
@@ -262,6 +266,7 @@ class _FileModel(_Model):
             max_w=head.max_w,
             reference_mv=head.reference_mv,
             fit_id=table.id if table else None,
+            limits=Limits(max_w=head.max_w, **{name: getattr(bench, name) for name in _RATINGS}),
         )
 
 

@@ -45,6 +45,8 @@ _BAND_KEYS = (
 _SIDES = ("forward", "reflected")
 #: The numbers of a fit that belong to no side and no band.
 _PLAIN_NUMBERS = ("reference_pct", "temperature_c", "temperature_span_c")
+#: What a bench at two temperatures has taught of the diodes; only there, and it goes before what `diode` names.
+_DIODE_NUMBERS = ("eg_ev", "xti", "n")
 #: The comment above the table; found again, and not doubled, when a file is fitted anew.
 _MARK = "# Written by `bridgewright fit`; not meant to be edited: id tells when a number has changed."
 _TABLE = re.compile(r"[ \t]*\[")
@@ -75,6 +77,8 @@ class FitTable:
             "residual": [{"step": r.step + 1, "what": r.what, "sigmas": round(r.sigmas, 3)} for r in fit.residuals],
             "notes": list(fit.notes),
         }
+        if fit.diode is not None:
+            content |= {name: getattr(fit.diode, name) for name in _DIODE_NUMBERS}
         return cls(_id_of(content), content)
 
     @classmethod
@@ -101,6 +105,8 @@ class FitTable:
     ) -> Bridge:
         """The calibrated bridge. KeyError, TypeError or ValueError where the table is not whole: see `read`."""
         laws = {side: self._law(side) for side in _SIDES}
+        if _DIODE_NUMBERS[0] in self.content:
+            diode = DiodeKind(*(float(self.content[name]) for name in _DIODE_NUMBERS))
         return Bridge(
             name=name,
             full_scale=full_scale,
@@ -214,7 +220,8 @@ def _dumps(table: FitTable) -> str:
     """The table as TOML, written by hand for its layout: a line a band, a line a residual."""
     lines = [_MARK, "[fit]", f'id = "{table.id:04X}"']
     content = table.content
-    plain = ("date", "program", *_PLAIN_NUMBERS, "reference_scatter_pct")
+    taught = [name for name in _DIODE_NUMBERS if name in content]
+    plain = ("date", "program", *_PLAIN_NUMBERS, "reference_scatter_pct", *taught)
     lines += [f"{key} = {_value(content[key])}" for key in plain]
     lines += ["notes = [", *(f"  {_value(note)}," for note in content["notes"]), "]"]
     lines += ["residual = ["]
@@ -265,6 +272,7 @@ def _band_from(table: dict[str, Any]) -> Band:
 def _id_of(content: dict[str, Any]) -> int:
     """CRC-16 over the fitted numbers, one a line: keys sorted, shortest round-trip decimals; 0 becomes 1."""
     numbers = {key: content[key] for key in _PLAIN_NUMBERS}
+    numbers |= {key: content[key] for key in _DIODE_NUMBERS if key in content}
     for side in _SIDES:
         for key, value in content[side].items():
             numbers |= _numbers_of(f"{side}.{key}", value)

@@ -15,8 +15,9 @@ from .bridge_file import BridgeFile
 
 if TYPE_CHECKING:
     from calibration.fit import Fit
+    from calibration.next_step import Advice
 
-__all__ = ["fit_of"]
+__all__ = ["advice_of", "fit_of"]
 
 _CONTRADICT = (
     "the steps cannot be fitted: they contradict each other or leave too much open; wanted in every band power steps "
@@ -48,3 +49,28 @@ def fit_of(sheet: BridgeFile) -> Fit:
     if not all(np.isfinite(band.covariance).all() for band in found.bridge.bands):
         raise SheetError(_CONTRADICT)
     return found
+
+
+def advice_of(sheet: BridgeFile, found: Fit | None = None, wanted_hz: tuple[float, ...] = ()) -> Advice:
+    """What to measure next for the sheet; `found`: its fit where there is one, `wanted_hz`: bands wanted besides.
+
+    UnitError where a load cannot be read, SheetError where the steps contradict each other.
+    """
+    from calibration.next_step import proposals
+
+    fitted = None if found is None or found.model is None or found.solution is None else (found.model, found.solution)
+    try:
+        with np.errstate(all="ignore"):
+            return proposals(
+                list(sheet.steps),
+                full_scale=sheet.full_scale,
+                z0_ohm=sheet.z0_ohm,
+                detector=sheet.detector,
+                ratings=sheet.ratings,
+                limits=sheet.limits,
+                match_return_loss_db=sheet.match_return_loss_db,
+                wanted_hz=wanted_hz,
+                fitted=fitted,
+            )
+    except np.linalg.LinAlgError as error:
+        raise SheetError(f"{_CONTRADICT} ({error})") from error

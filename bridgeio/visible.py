@@ -1,7 +1,7 @@
 """Outside text made visible: what it holds is seen, and drives nothing.
 
-One rule: what comes out is printable characters only; nameplates, remarks, lines, names and contents of files are stored
-raw and pass here before anybody is shown them.
+One rule: what comes out is printable characters only; nameplates, remarks, lines, names and contents of files are
+stored raw and pass here before anybody is shown them.
 """
 
 from __future__ import annotations

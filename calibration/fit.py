@@ -5,7 +5,7 @@ One rule: what the steps do not determine is not reported as known; it gets a bo
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from functools import partial
 
 import numpy as np
@@ -16,6 +16,7 @@ from .fit_demands import demand_power_in_bands, demand_usable, demand_whole, eno
 from .fit_model import BenchModel
 from .fit_notes import check_words, fit_notes
 from .fit_search import Solution, first_minimum, scatter_of, solve
+from .fit_warmth import main_steps, warmth_of
 from .laws import LAWS
 from .leak_limits import band_of_fit, with_neighbours
 from .loads import LoadPart, load_impedance_ohm
@@ -52,6 +53,7 @@ class Fit:
     """Outcome of a fit: the bridge, the wattmeter's scatter (relative sd), residuals by step, and sentences.
 
     slips: steps set aside, also the first of the notes. loads: the parts as found. checks: closed forms beside the fit.
+    diode: what a bench at two temperatures taught of the diodes. model, solution: for what else is asked of the fit.
     """
 
     bridge: Bridge
@@ -62,6 +64,9 @@ class Fit:
     slips: tuple[Slip, ...] = ()
     loads: tuple[LoadFound, ...] = ()
     checks: tuple[str, ...] = ()
+    diode: DiodeKind | None = None
+    model: BenchModel | None = field(default=None, compare=False, repr=False)
+    solution: Solution | None = field(default=None, compare=False, repr=False)
 
 
 #: What is done with a slip.
@@ -88,6 +93,21 @@ def fit(
     """
     ratings = ratings or BenchRatings()
     usable = [_with_power(step, z0_ohm) for step in steps]
+    celsius = [step.temperature_c for step in steps]
+    main = main_steps(usable) if detector == "diode" else None
+    warmth = None
+    if main is not None:
+        alone = fit(
+            [usable[at] for at in main],
+            name=name,
+            full_scale=full_scale,
+            z0_ohm=z0_ohm,
+            ratings=ratings,
+            diode=diode,
+            seed=seed,
+        )
+        warmth = warmth_of(usable, main, alone.bridge, alone.reference_scatter)
+        usable, diode = warmth.steps, warmth.diode
     model, solution, slips = _solved(usable, ratings, z0_ohm, detector, full_scale, seed)
     vector = solution.vector
     forward, reflected = model.laws(vector)
@@ -107,8 +127,8 @@ def fit(
         reference_pct=_reference_pct(usable, ratings),
         device_id=device_id,
         diode=diode,
-        temperature_c=float(np.mean([s.temperature_c for s in steps])),
-        temperature_span_c=float(np.ptp([s.temperature_c for s in steps])),
+        temperature_c=float(np.mean(celsius)) if warmth is None else warmth.temperature_c,
+        temperature_span_c=float(np.ptp(celsius)),
     )
     residuals = _residuals(model, vector)
     aside = {step for slip in slips for step in slip.steps}
@@ -121,10 +141,13 @@ def fit(
         model.scatter,
         residuals,
         float(np.mean(np.square(used))),
-        notes,
+        notes if warmth is None else (*notes, warmth.words),
         slips=tuple(slips),
         loads=_loads(model, solution),
         checks=check_words(model, solution, bridge),
+        diode=None if warmth is None else warmth.diode,
+        model=model,
+        solution=solution,
     )
 
 

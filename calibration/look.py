@@ -36,7 +36,7 @@ _LIMITS = ("directivity_limit", "forward_leak_limit", "angle_cosine", "directivi
 
 @dataclass(frozen=True, slots=True)
 class BandTerms:
-    """What bands say, as arrays over them [B]: gains squared, (d, c) best, (d, c, cosine, least d) limits, covariance."""
+    """What bands say, as arrays over them [B]: gains squared, (d, c) best, limits by _LIMITS, covariance."""
 
     gain_forward_squared: Array
     gain_reflected_squared: Array

@@ -161,7 +161,8 @@ def uncalibrated(
     columns = {"forward_counts": nf, "reflected_counts": nr, "frequency_hz": blank}
     columns |= {"forward_w": blank, "rho": blank, "reflected_w": blank}
     bits = _outside_bits(nf.shape, checked, simulated) | np.uint32(flag.bit("uncalibrated"))
-    return Readings(columns, bits, Terms(*([blank[None, :]] * len(fields(Terms)))), beyond_open=np.zeros(nf.shape, dtype=bool))
+    terms = Terms(*([blank[None, :]] * len(fields(Terms))))
+    return Readings(columns, bits, terms, beyond_open=np.zeros(nf.shape, dtype=bool))
 
 
 def _outside_bits(shape: tuple[int, ...], checked: bool, simulated: bool) -> Bits:

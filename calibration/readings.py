@@ -32,9 +32,8 @@ class Terms:
 
     forward_low_w, forward_high_w: linearised forward power less and plus the 95 % limit of its scale and law [W];
     forward_noise: converter's sd of it, relative. ratio_low, ratio_high: M = R/F less and plus the 95 % limit of its
-    law and balance; ratio_noise: sd of M F - R over F. directivity, leak, angle_cosine, directivity_least: as in `Band`,
-    at their limits.
-    What is unbounded (a clipped detector) is 0 below and infinite above.
+    law and balance; ratio_noise: sd of M F - R over F. directivity, leak, angle_cosine, directivity_least: as in
+    `Band`, at their limits. What is unbounded (a clipped detector) is 0 below and infinite above.
     """
 
     forward_low_w: Array

@@ -27,6 +27,8 @@ DONE, USAGE, FILE_WRONG, LINK_FAILED, DATA_SHORT, JOURNAL_HELD, STOPPED = 0, 2, 
 
 def main(argv: Sequence[str] | None = None) -> int:
     """Run the command line `argv` (sys.argv unless given) and return the exit code."""
+    # Matrices are small here: more than one thread only makes them wait for each other. Numpy asks when it is loaded.
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     words = list(sys.argv[1:] if argv is None else argv)
     for name in ("stdout", "stderr"):
         _settle_output(name)

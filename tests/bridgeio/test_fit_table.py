@@ -7,6 +7,8 @@ import subprocess
 import sys
 import tomllib
 from contextlib import suppress
+from dataclasses import replace
+from datetime import UTC, datetime
 from pathlib import Path
 
 import numpy as np
@@ -18,6 +20,7 @@ from bridgeio.bridge_file import load_bridge_file, parse_bridge_file, sheet_text
 from bridgeio.errors import FileError
 from bridgeio.fit_table import FitTable, _id_of, toml_text, write_fit, write_whole
 from calibration.meter import Meter
+from calibration.warmth import DiodeKind
 from tests import fitted, shed
 
 ROOT = Path(__file__).parents[2]
@@ -247,3 +250,15 @@ def test_permissions_are_kept(tmp_path):
     mask = os.umask(0)
     os.umask(mask)
     assert (old.stat().st_mode & 0o777, new.stat().st_mode & 0o777) == (0o640, 0o666 & ~mask)
+
+
+def test_diode_learnt_from_two_temperatures_goes_before_the_named_one(tmp_path):
+    """Its three numbers stand in [fit], belong to the id, and are what readings at other temperatures use."""
+    learnt = DiodeKind(0.61, 2.5, 1.2)
+    table = FitTable.of_fit(replace(shed.fitted(12), diode=learnt), datetime(2026, 1, 31, tzinfo=UTC))
+    path = tmp_path / "warm.toml"
+    write_fit(path, sheet_text(fitted.SHEET).replace('diode = "germanium"', 'diode = "silicon"'), table)
+    assert load_bridge_file(path).calibrated().diode == learnt
+    path.write_text(path.read_text(encoding="utf-8").replace("eg_ev = 0.61", "eg_ev = 0.62"), encoding="utf-8")
+    with pytest.raises(FileError, match="were changed after the fit"):
+        load_bridge_file(path)

@@ -15,11 +15,15 @@ if TYPE_CHECKING:
     from bridgeio.bridge_file import BridgeFile
     from calibration.bridge import Band
     from calibration.fit import Fit
+    from calibration.next_step import Advice
 
 __all__ = ["EXAMPLE", "add_arguments", "run"]
 
 #: Residuals of this many times their expected variance are no noise.
 _CONTRADICTING = 4.0
+#: Steps proposed.
+_PROPOSALS = 3
+
 EXAMPLE = "bridgewright fit shed.bench.toml -o shed.bridge.toml"
 
 
@@ -35,7 +39,7 @@ def run(args: argparse.Namespace) -> int:
 
     from bridgeio.bridge_file import parse_bridge_file, sheet_text
     from bridgeio.fit_table import FitTable, write_fit
-    from bridgeio.sheet_fit import fit_of
+    from bridgeio.sheet_fit import advice_of, fit_of
 
     # Read once: what is fitted and what is written are then the same steps, whoever edits the file meanwhile.
     text = sheet_text(args.file)
@@ -43,6 +47,7 @@ def run(args: argparse.Namespace) -> int:
     say(visible(f"bridgewright fit: {len(sheet.steps)} steps of {sheet.name}; this takes some seconds"))
     found = fit_of(sheet)
     say("\n".join(visible(line) for line in _report(sheet, found)), sys.stdout)
+    say("\n".join(visible(line) for line in _next_lines(advice_of(sheet, found))), sys.stdout)
     if args.output:
         table = FitTable.of_fit(found, datetime.now(UTC))
         write_fit(args.output, text, table)
@@ -89,6 +94,14 @@ def _load_lines(found: Fit) -> list[str]:
         f"{load.nh:9.1f} nH   {load.pf:8.1f} pF"
         for load in found.loads
     ]
+
+
+def _next_lines(advice: Advice) -> list[str]:
+    """What to measure next, the best few."""
+    best = tuple(proposal.words for proposal in advice.proposals[:_PROPOSALS])
+    if not best:
+        return ["", *_wrapped("", advice.lead), "nothing more that would narrow these intervals by a hundredth"]
+    return ["", *_wrapped("", advice.lead), "to measure next:", *_wrapped("- ", best)]
 
 
 def _wrapped(label: str, sentences: tuple[str, ...]) -> list[str]:
