@@ -2,6 +2,9 @@
 
 import os
 
+# Matrices are small here: more than one thread only makes them wait for each other.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+
 import pytest
 
 
