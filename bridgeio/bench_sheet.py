@@ -20,7 +20,7 @@ from .errors import FileError
 from .fit_table import toml_text, write_whole
 from .frames import Nameplate
 
-__all__ = ["BenchSheet", "SheetHead", "fit_is_behind", "head_text", "step_text"]
+__all__ = ["BenchSheet", "SheetHead", "head_text", "step_text"]
 
 _BOM = "\ufeff"
 _DEFAULTS = {one.name: one.default for one in fields(BenchStep)}
@@ -111,6 +111,13 @@ class BenchSheet:
         """The ratings that the file names."""
         return self.file.limits
 
+    @property
+    def fit_is_behind(self) -> bool:
+        """Whether the file's [fit] was made from other steps or references than are there; False where none tells."""
+        fit = tomllib.loads(sheet_text(self.path).removeprefix(_BOM)).get("fit")
+        told = fit.get("steps") if isinstance(fit, dict) else None
+        return told not in (None, self.file.digest)
+
     def append(self, step: BenchStep) -> BridgeFile:
         """Write `step` (rounded as `step_text` does) as the file's last; return the file as it then is, less [fit].
 
@@ -161,20 +168,6 @@ class BenchSheet:
         file = parse_bridge_file(_writable(text, self.path).removeprefix(_BOM), str(self.path), steps_only=True)
         write_whole(self.path.resolve(), text)
         self.file = file
-
-
-def fit_is_behind(text: str) -> bool:
-    """Whether the text of a bridge file holds steps that its [fit] has not seen: more than it has residuals of.
-
-    Steps changed by hand are not noticed. False for a sheet without [fit].
-    """
-    raw = tomllib.loads(text.removeprefix(_BOM))
-    fit = raw.get("fit")
-    if not isinstance(fit, dict):
-        return False
-    rows = [row.get("step") for row in fit.get("residual", []) if isinstance(row, dict)]
-    seen = [number for number in rows if isinstance(number, int)]
-    return max(seen, default=0) != len(raw.get("step", []))
 
 
 def head_text(head: SheetHead) -> str:

@@ -22,7 +22,6 @@ from calibration.reflection import rho_from_swr, swr_from_rho
 from calibration.units import wave_db
 from calibration.warmth import DIODES
 
-from .fit_match import disagreements
 from .fitted_file import FittedFile, known_power_w
 
 __all__ = ["SWRS", "Section", "interval_grid", "middle_power_w", "power_sds_db", "sections", "show_powers_w"]
@@ -111,12 +110,12 @@ def _bridge(fitted: FittedFile) -> Section:
     spread = f" (the bench spans {bridge.temperature_span_c:.1f} K)" if bridge.temperature_span_c else ""
     rows += [("box temperature", f"{bridge.temperature_c:.1f} C{spread}")]
     rows += [("fitted", f"{fit.date}, by {fit.program}"), ("fit id", f"{file.fit_id or 0:04X}")]
-    off = disagreements(fitted)
-    words = [f"Caution: {one}." for one in off]
-    if off:
-        words += ["The fit is older than these steps: fit the file anew before it is read by."]
+    if file.outdated:
+        words = [f"Caution: {file.outdated}."]
+    elif file.fit_of is None:
+        words = ["The fit does not tell which steps it was made from."]
     else:
-        words += [f"The fit goes with the {len(file.steps)} steps of the file, as far as it can be told."]
+        words = [f"The fit is that of the {len(file.steps)} steps of the file."]
     return Section("Bridge", tuple(words), rows=tuple(rows))
 
 

@@ -10,8 +10,9 @@ import math
 import re
 import shlex
 import tomllib
+import zlib
 from collections.abc import Iterator
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field, fields, replace
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -57,7 +58,26 @@ class BridgeFile:
     reference_mv: int | None = None
     diode: DiodeKind | None = None
     fit_id: int | None = None
+    fit_of: str | None = None
     limits: Limits = field(default_factory=Limits)
+
+    @property
+    def digest(self) -> str:
+        """CRC-32 over all that a fit is made from: steps, references and what the bridge is."""
+        head = self.full_scale, self.z0_ohm, self.detector, self.match_return_loss_db
+        lines = "".join(f"{one!r}\n" for one in (*head, *map(_told, (self.diode, self.ratings, *self.steps))))
+        return f"{zlib.crc32(lines.encode('utf-8')):08X}"
+
+    @property
+    def outdated(self) -> str | None:
+        """A sentence where steps or references were changed after the fit; None where not, or the fit does not tell."""
+        if self.fit_of in (None, self.digest):
+            return None
+        path = shlex.quote(self.source)
+        return (
+            f"steps or references in {self.source} were changed after its fit: run `bridgewright fit {path} -o {path}` "
+            "to bring it up to date"
+        )
 
     def calibrated(self) -> Bridge:
         """The fitted bridge. FileError for a sheet without [fit]."""
@@ -266,8 +286,17 @@ class _FileModel(_Model):
             max_w=head.max_w,
             reference_mv=head.reference_mv,
             fit_id=table.id if table else None,
+            fit_of=table.steps if table else None,
             limits=Limits(max_w=head.max_w, **{name: getattr(bench, name) for name in _RATINGS}),
         )
+
+
+def _told(one: DiodeKind | BenchRatings | BenchStep | None) -> list[tuple[str, Any]] | None:
+    """What is told of something beyond its defaults, so that fields which later versions add change no digest."""
+    if one is None:
+        return None
+    members = ((member, getattr(one, member.name)) for member in fields(one))
+    return [(member.name, value) for member, value in members if value != member.default]
 
 
 def _diode_of(head: _BridgeModel) -> DiodeKind | None:

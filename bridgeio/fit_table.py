@@ -61,12 +61,13 @@ class FitTable:
     content: dict[str, Any]
 
     @classmethod
-    def of_fit(cls, fit: Fit, written: datetime) -> FitTable:
-        """The table of a fit done now."""
+    def of_fit(cls, fit: Fit, written: datetime, steps: str) -> FitTable:
+        """The table of a fit done now; `steps` is the digest of what it was made from (`BridgeFile.digest`)."""
         bridge = fit.bridge
         content: dict[str, Any] = {
             "date": written.isoformat(timespec="seconds"),
             "program": f"bridgewright {__version__}",
+            "steps": steps,
             "reference_pct": bridge.reference_pct,
             "reference_scatter_pct": 100.0 * fit.reference_scatter,
             "temperature_c": bridge.temperature_c,
@@ -99,6 +100,12 @@ class FitTable:
                 f"they were changed after the fit; {again}"
             )
         return table
+
+    @property
+    def steps(self) -> str | None:
+        """Digest of what the fit was made from; None where an older version has not kept it."""
+        told = self.content.get("steps")
+        return None if told is None else str(told)
 
     def bridge(
         self, name: str, full_scale: int, z0_ohm: float, device_id: int | None, diode: DiodeKind | None = None
@@ -221,8 +228,8 @@ def _dumps(table: FitTable) -> str:
     lines = [_MARK, "[fit]", f'id = "{table.id:04X}"']
     content = table.content
     taught = [name for name in _DIODE_NUMBERS if name in content]
-    plain = ("date", "program", *_PLAIN_NUMBERS, "reference_scatter_pct", *taught)
-    lines += [f"{key} = {_value(content[key])}" for key in plain]
+    plain = ("date", "program", "steps", *_PLAIN_NUMBERS, "reference_scatter_pct", *taught)
+    lines += [f"{key} = {_value(content[key])}" for key in plain if key in content]
     lines += ["notes = [", *(f"  {_value(note)}," for note in content["notes"]), "]"]
     lines += ["residual = ["]
     lines += [f"  {{ {', '.join(f'{k} = {_value(v)}' for k, v in row.items())} }}," for row in content["residual"]]

@@ -27,8 +27,10 @@ class Calibration:
     dark: DarkKeeper
 
     def caution(self, plate: Nameplate | None) -> str | None:
-        """What the board says against this calibration, in a sentence; None where it says nothing."""
+        """What the file itself or the board says against this calibration, in a sentence; None where nothing does."""
         file = self.file
+        if file.outdated:
+            return file.outdated
         if plate is None:
             return None
         if plate.bridge_file_id not in (0, file.fit_id):

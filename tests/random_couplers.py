@@ -1,7 +1,7 @@
 """Random couplers with detectors and converters, in complex waves, and the benches a builder would take with them.
 
-One rule: nothing here knows how readings are made: a diode is solved by its current's balance, a logarithmic detector is
-its data sheet's line with ripple, and what a port sees is the sum of two waves.
+One rule: nothing here knows how readings are made: a diode is solved by its current's balance, a logarithmic detector
+is its data sheet's line with ripple, and what a port sees is the sum of two waves.
 """
 
 from __future__ import annotations
@@ -162,4 +162,6 @@ def random_coupler(seed: int, detector: str, converter: str) -> RandomCoupler:
         for volt in volts
     )
     dummy = 10 ** (-36 / 20) * np.sqrt(rng.random()) * np.exp(2j * np.pi * rng.random())
-    return RandomCoupler(converter, complex(d), complex(own_c + match), complex(match), volts, (first, second), dummy, seed)
+    return RandomCoupler(
+        converter, complex(d), complex(own_c + match), complex(match), volts, (first, second), dummy, seed
+    )

@@ -26,8 +26,8 @@ __all__ = ["HOSTILE", "Screen", "residue"]
 
 ROOT = Path(__file__).parents[1]
 
-#: Sequences by ECMA-48 and the terminals' private modes, all that a drawn screen needs: colours, the cursor's place, the
-#: other screen, mouse, focus and paste reports, synchronised output, the keyboard's protocol, the pointer's shape.
+#: Sequences by ECMA-48 and the terminals' private modes, all that a drawn screen needs: colours, the cursor's place,
+#: the other screen, mouse, focus and paste reports, synchronised output, the keyboard's protocol, the pointer's shape.
 _ALLOWED = re.compile(
     r"\x1b\[[0-9;:]*m"
     r"|\x1b\[[0-9]+;[0-9]+H"
@@ -45,16 +45,62 @@ _NO_WIDTH = frozenset("\u034f\u115f\u1160\u17b4\u17b5\u3164\uffa0")
 _CANARY = re.compile(r"\x1b\[38;5;199m|\x1b\[19;7H")
 
 _ESC_STRINGS = (
-    "\x1b[2J", "\x1b[6n", "\x1b[c", "\x1b[38;5;199mx", "\x1b[19;7Hx", "\x1bc", "\x1b(0", "\x1b#8", "\x1b%G", "\x1b[?5h",
-    "\x1b]0;owned\x07", "\x1b]2;owned\x1b\\", "\x1b]8;;a:b\x07x", "\x1b]52;c;eA==\x07", "\x1b]4;1;?\x07", "\x1b]22;x\x07",
-    "\x1bPq\x1b\\", "\x1bP$q\x1b\\", "\x1b_G\x1b\\", "\x1b^x\x1b\\", "\x1bXx\x1b\\", "\x1b[5i", "\x1b[8;1;1t", "\x1b[21t",
-)  # fmt: skip
+    "\x1b[2J",
+    "\x1b[6n",
+    "\x1b[c",
+    "\x1b[38;5;199mx",
+    "\x1b[19;7Hx",
+    "\x1bc",
+    "\x1b(0",
+    "\x1b#8",
+    "\x1b%G",
+    "\x1b[?5h",
+    "\x1b]0;owned\x07",
+    "\x1b]2;owned\x1b\\",
+    "\x1b]8;;a:b\x07x",
+    "\x1b]52;c;eA==\x07",
+    "\x1b]4;1;?\x07",
+    "\x1b]22;x\x07",
+    "\x1bPq\x1b\\",
+    "\x1bP$q\x1b\\",
+    "\x1b_G\x1b\\",
+    "\x1b^x\x1b\\",
+    "\x1bXx\x1b\\",
+    "\x1b[5i",
+    "\x1b[8;1;1t",
+    "\x1b[21t",
+)
 _C1_STRINGS = ("\x9b2J", "\x9b31mx", "\x9d0;owned\x9c", "\x90q\x9c", "\x85", "\x84", "\x8d", "\x9ec\x9c", "\x9fc\x9c")
-_C0_STRINGS = ("\x00", "\x05", "\x07", "\x08\x08", "\t", "\x0b", "\x0c", "\r-", "\x0e", "\x0f", "\x18", "\x1a", "\x7f", "a\nb")
+_C0_STRINGS = (
+    "\x00",
+    "\x05",
+    "\x07",
+    "\x08\x08",
+    "\t",
+    "\x0b",
+    "\x0c",
+    "\r-",
+    "\x0e",
+    "\x0f",
+    "\x18",
+    "\x1a",
+    "\x7f",
+    "a\nb",
+)
 _UNSEEN_STRINGS = (
-    "\u202egnp", "\u2066a\u2069", "\u200fa", "\u061ca", "\u2028a", "\u2029a", "a\u200bb", "\ufeffa", "\u00ada", "\u3164",
-    "\U000e0041", "\ufff9a",
-)  # fmt: skip
+    "\u202egnp",
+    "\u2066a\u2069",
+    "\u200fa",
+    "\u061ca",
+    "\u2028a",
+    "\u2029a",
+    "a\u200bb",
+    "\ufeffa",
+    "\u00ada",
+    "\u3164",
+    "\U000e0041",
+    "\ufff9a",
+)
 _MARKUP_STRINGS = ("[red]x[/]", "[@click=q]x", "[/]", "[bold", "\\[x]", "<b>x</b>", "{x}", "$x", "%s")
 
 #: What an outside text may hold to drive a terminal, a page or our own drawing; each fits a nameplate in part at least.

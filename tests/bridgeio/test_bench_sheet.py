@@ -11,7 +11,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from bridgeio import bench_sheet
-from bridgeio.bench_sheet import BenchSheet, SheetHead, fit_is_behind, head_text, step_text
+from bridgeio.bench_sheet import BenchSheet, SheetHead, head_text, step_text
 from bridgeio.bridge_file import load_bridge_file, parse_bridge_file
 from bridgeio.errors import FileError
 from bridgeio.frames import Nameplate
@@ -178,14 +178,16 @@ def test_step_goes_to_the_end_where_steps_follow_the_fit(path):
 
 
 def test_fit_behind_its_steps_is_noticed(path):
-    """A fit that has not seen the newest step, or has seen one that is gone, is behind."""
+    """A fit that has not seen the newest step is behind; with the step taken back it is not."""
     sheet = sheet_with(path, FITTED)
-    assert not fit_is_behind(path.read_text(encoding="utf-8"))
+    assert not sheet.fit_is_behind
     sheet.append(LOAD)
-    assert fit_is_behind(path.read_text(encoding="utf-8"))
+    assert sheet.fit_is_behind
+    assert "were changed after its fit" in load_bridge_file(path).outdated
     sheet.undo()
-    assert not fit_is_behind(path.read_text(encoding="utf-8"))
-    assert not fit_is_behind(USERS)
+    assert not sheet.fit_is_behind
+    assert load_bridge_file(path).outdated is None
+    assert not sheet_with(path, USERS).fit_is_behind
 
 
 def test_wrong_fit_does_not_stop_the_bench(path):

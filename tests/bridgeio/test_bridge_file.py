@@ -286,3 +286,20 @@ def test_fit_of_any_shape_is_a_file_error(value, path):
     at[last] = value
     with pytest.raises(FileError, match=r"fit: is not whole|fit\.id: found"):
         FitTable.read(content, "x")
+
+
+@pytest.mark.parametrize(
+    ("old", "new"),
+    [
+        ("power_w = 48.28", "power_w = 44.28"),
+        ("forward = 894.89", "forward = 984.89"),
+        ("resistor_pct = 1.0", "resistor_pct = 2.0"),
+        ('diode = "germanium"', 'diode = "silicon"'),
+    ],
+)
+def test_what_is_changed_after_the_fit_is_noticed(old, new):
+    """Any step, reference or property that a fit is made from: the file says that the fit is not of them."""
+    text = fitted.bridge_text(12)
+    assert parse_bridge_file(text, "b.toml").outdated is None
+    assert old in text
+    assert "changed after its fit: run" in (parse_bridge_file(text.replace(old, new, 1), "b.toml").outdated or "")

@@ -52,7 +52,7 @@ def test_text_fits_a_terminal_and_names_what_was_fitted(path, monkeypatch):
     file = load_bridge_file(path)
     for told in (
         file.name, f"{file.fit_id:04X}", "2026-01-31", "bridgewright ", "diode, germanium", "50 ohm", "4095 counts",
-        "goes with the 57 steps", "5 % of reading", "return loss at least 36 dB", "23 power, 9 reversed, 24 load",
+        "is that of the 57 steps", "5 % of reading", "return loss at least 36 dB", "23 power, 9 reversed, 24 load",
     ):  # fmt: skip
         assert told in words, told
     for heading in ("BRIDGE", "DETECTOR LAWS", "DIRECTIVITY AND LEAKAGE", "COUPLING", "SWR INTERVALS", "STEPS"):
@@ -183,10 +183,10 @@ def test_any_law_and_number_of_bands_is_reported(tmp_path, detector, law, count)
     sheet = f'schema = 1\n[bridge]\nname = "b"\nfull_scale = 65520\ndetector = "{detector}"\n'
     found = Fit(bridge_of(law, law, count), 0.01, (), 1.0, ())
     path = tmp_path / "b.toml"
-    write_fit(path, sheet, FitTable.of_fit(found, datetime(2026, 1, 31, tzinfo=UTC)))
+    write_fit(path, sheet, FitTable.of_fit(found, datetime(2026, 1, 31, tzinfo=UTC), ""))
     words = "\n".join(bridge_report.text(path))
     assert "counts/dB" in words if detector == "log" else "8 powers, 100.0-60000.0 counts" in words
-    assert "fit the file anew" in words
+    assert "were changed after its fit" in words.replace("\n", " ")
     assert len(section("SWR intervals", path).rows) == count
     assert bridge_report.html(path, visible=visible).count("<img ") == 5
 
@@ -223,7 +223,7 @@ def test_gain_that_is_none_is_a_fault_of_the_file(tmp_path):
     found = Fit(replace(bridge, bands=(replace(bridge.bands[0], gain_reflected=0.0),)), 0.01, (), 1.0, ())
     path = tmp_path / "b.toml"
     sheet = 'schema = 1\n[bridge]\nname = "b"\nfull_scale = 65520\ndetector = "log"\n'
-    write_fit(path, sheet, FitTable.of_fit(found, datetime(2026, 1, 31, tzinfo=UTC)))
+    write_fit(path, sheet, FitTable.of_fit(found, datetime(2026, 1, 31, tzinfo=UTC), ""))
     with pytest.raises(FileError, match="band 1 has a gain out of range"):
         bridge_report.text(path)
 

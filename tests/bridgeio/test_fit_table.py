@@ -76,7 +76,9 @@ def test_readings_by_the_file_are_those_by_the_fit():
 def test_changed_digit_is_noticed(data):
     """Any digit of a fitted number changed by hand makes the file refused, with both ids or the part that is broken."""
     text = fit_part(fitted.bridge_text(12))
-    lines = [m.span() for m in re.finditer(r"(?m)^(?!id|date|program|reference_scatter_pct| )\w+ = .*\d.*$", text)]
+    lines = [
+        m.span() for m in re.finditer(r"(?m)^(?!id|date|program|steps|reference_scatter_pct| )\w+ = .*\d.*$", text)
+    ]
     start, end = data.draw(st.sampled_from(lines))
     digits = [at for at in range(text.index("=", start), end) if text[at].isdigit()]
     at = data.draw(st.sampled_from(digits))
@@ -255,7 +257,9 @@ def test_permissions_are_kept(tmp_path):
 def test_diode_learnt_from_two_temperatures_goes_before_the_named_one(tmp_path):
     """Its three numbers stand in [fit], belong to the id, and are what readings at other temperatures use."""
     learnt = DiodeKind(0.61, 2.5, 1.2)
-    table = FitTable.of_fit(replace(shed.fitted(12), diode=learnt), datetime(2026, 1, 31, tzinfo=UTC))
+    table = FitTable.of_fit(
+        replace(shed.fitted(12), diode=learnt), datetime(2026, 1, 31, tzinfo=UTC), shed.sheet(12).digest
+    )
     path = tmp_path / "warm.toml"
     write_fit(path, sheet_text(fitted.SHEET).replace('diode = "germanium"', 'diode = "silicon"'), table)
     assert load_bridge_file(path).calibrated().diode == learnt

@@ -1,9 +1,9 @@
 """Bad input at the command line: what a user reads, the code it leaves with, and that nothing drives the terminal."""
 
 import os
-import signal
 import random
 import shutil
+import signal
 import subprocess
 import sys
 import threading

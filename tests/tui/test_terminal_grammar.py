@@ -28,6 +28,8 @@ from tui.screens import SCREENS
 _A_TEXT_S = 0.025
 #: A name for folders and ports that would do most of it at once.
 EVIL = "a\x1b]2;owned\x07\x1b[2J\x9b31m\u202e[red]"
+#: The screens that key `s` goes round; the bench is among them only with its file.
+ROUND = [name for name in SCREENS if name != "bench"]
 
 
 def fits(text: str, room: int) -> str:
@@ -129,7 +131,7 @@ def test_no_screen_lets_outside_text_drive_the_terminal(tmp_path, columns, lines
     ):
         screen.wait_for("forward" if columns > 40 else "SWR")
         board.a_round_more()
-        for _ in SCREENS:
+        for _ in ROUND:
             screen.type("s")
             board.a_round_more()
         for opens, closes in (("?", "\x1b"), ("f", "\x1b")):
@@ -156,6 +158,33 @@ def test_an_error_that_ends_the_screen_is_harmless_too(tmp_path):
     assert b"\\x1b" in screen.written
 
 
+def test_bench_lets_no_outside_text_drive_the_terminal(tmp_path):
+    """The bench's questions, body, news and prompt before a hostile board, a file of a hostile name: no residue."""
+    (tmp_path / EVIL).mkdir()
+    sheet = tmp_path / EVIL / "x.toml"
+    with (
+        hostile_board(tmp_path) as board,
+        Screen([sys.executable, "-m", "tui", "watch", str(board.path), "--bench", str(sheet)]) as screen,
+    ):
+        seen = screen.wait_for("What is this bridge called?")
+        screen.type("\r")
+        seen = screen.wait_for("What line", seen)
+        for answer in 13 * ("\r",):
+            screen.type(answer)
+        seen = screen.wait_for("Choose a step", seen)
+        screen.type("\r")
+        seen = screen.wait_for("before you key", seen)
+        screen.type("\r")
+        board.a_round_more()
+        board.unplug()
+        screen.wait_for("unplugged", seen)
+        screen.type("q")
+        assert screen.end() == 0
+    assert sheet.exists()
+    assert residue(screen.written) == []
+    assert b"\\x1b" in screen.written
+
+
 @pytest.mark.skipif(not shutil.which("tmux"), reason="no terminal: apt install tmux")
 def test_title_and_clipboard_stay_as_they_were(tmp_path):
     """In tmux, which lets programs set both: the pane keeps its title and no buffer is filled."""
@@ -174,7 +203,7 @@ def test_title_and_clipboard_stay_as_they_were(tmp_path):
             tmux("set-option", "-g", "allow-rename", "on")
             title = tmux("display-message", "-p", "#{pane_title}")
             board.a_round_more()
-            for _ in SCREENS:
+            for _ in ROUND:
                 tmux("send-keys", "s")
                 board.a_round_more()
             shown = tmux("capture-pane", "-p")

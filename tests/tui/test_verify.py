@@ -55,7 +55,9 @@ def test_narrowed_intervals_are_called_too_narrow(judge, tmp_path):
     )
     boast = tmp_path / "boast.toml"
     table = FitTable.of_fit(
-        replace(found, bridge=replace(found.bridge, bands=bands)), datetime(2026, 1, 31, tzinfo=UTC)
+        replace(found, bridge=replace(found.bridge, bands=bands)),
+        datetime(2026, 1, 31, tzinfo=UTC),
+        shed.sheet(12).digest,
     )
     write_fit(boast, fitted.SHEET.read_text(encoding="utf-8"), table)
     code, out, _ = judge(known_loads.load_steps(rows=slice(0, 40)), boast)

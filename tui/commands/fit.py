@@ -49,7 +49,7 @@ def run(args: argparse.Namespace) -> int:
     say("\n".join(visible(line) for line in _report(sheet, found)), sys.stdout)
     say("\n".join(visible(line) for line in _next_lines(advice_of(sheet, found))), sys.stdout)
     if args.output:
-        table = FitTable.of_fit(found, datetime.now(UTC))
+        table = FitTable.of_fit(found, datetime.now(UTC), sheet.digest)
         write_fit(args.output, text, table)
         say(visible(f"written: {args.output}, fit id {table.id:04X}"), sys.stdout)
     else:
