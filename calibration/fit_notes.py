@@ -22,6 +22,8 @@ __all__ = ["check_words", "fit_notes", "pair_scale", "power_limit", "reversed_di
 Array = npt.NDArray[np.float64]
 
 _SWR = 1.5
+#: Where what is missing is told in SWR [W].
+_POWER_W = 10.0
 #: A law is determined at a power where that is known to this [95 %, relative], the wattmeter's own accuracy aside.
 _LAW_LIMIT = 0.04
 #: It is the law, and not the gain, where the limit grows by this factor below the lowest step.
@@ -41,19 +43,37 @@ def fit_notes(model: BenchModel, solution: Solution, bridge: Bridge, identified:
     said = _dummy_notes(model, solution, bridge)
     if not solution.settled:
         said.append("the fit did not come to rest: these steps do not determine all that it looks for")
-    said += _missing_notes(model)
+    said += _missing_notes(model, bridge)
     said += _leak_notes(bridge, identified)
     said += _law_notes(model, solution, bridge)
     return tuple([*said, *_cross_checks(model, solution, bridge)])
 
 
-def swr_span(band: Band, *, directivity: float | None = None, leak: float | None = None) -> str:
-    """Between what an SWR of 1.5 lies on one look, as "1.36-1.66"; directivity, leak: other limits of |d| and |c|."""
+def swr_span(
+    band: Band, *, directivity: float | None = None, leak: float | None = None, ratio_part: float = 0.0
+) -> str:
+    """Between what an SWR of 1.5 lies on one look, as "1.36-1.66".
+
+    directivity, leak: other limits of |d| and |c|. ratio_part: 95 % limit, relative, of reflected over forward power.
+    """
     ratio = np.square(rho_from_swr(_SWR))
     d = band.directivity_limit if directivity is None else directivity
     c = band.forward_leak_limit if leak is None else leak
-    low, high = (float(swr_from_rho(rho)) for rho in rho_interval(ratio, ratio, 0.0, d, c, band.angle_cosine))
+    ends = rho_interval(ratio * max(0.0, 1.0 - ratio_part), ratio * (1.0 + ratio_part), 0.0, d, c, band.angle_cosine)
+    low, high = (float(swr_from_rho(rho)) for rho in ends)
     return f"{low:.2f}-{high:.2f}"
+
+
+def _ratio_part(bridge: Bridge, band: Band, power_w: float) -> float:
+    """95 % limit, relative, of reflected over forward power by laws and gains, at SWR 1.5 and a forward power [W]."""
+    squares = band.gain_forward**2 * power_w, band.gain_reflected**2 * power_w * float(rho_from_swr(_SWR)) ** 2
+    laws = bridge.forward_law, bridge.reflected_law
+    forward, reflected = (
+        np.ravel(law.sensitivity(law.counts(square))) / square for law, square in zip(laws, squares, strict=True)
+    )
+    # M = reflected/forward, and a power is the law's square over the gain squared.
+    ways = np.concatenate([[2.0, -2.0], -forward, reflected])
+    return NORMAL_DEVIATE * float(np.sqrt(max(ways @ band.covariance @ ways, 0.0)))
 
 
 def _dummy_notes(model: BenchModel, solution: Solution, bridge: Bridge) -> list[str]:
@@ -71,16 +91,21 @@ def _dummy_notes(model: BenchModel, solution: Solution, bridge: Bridge) -> list[
     ]
 
 
-def _missing_notes(model: BenchModel) -> list[str]:
+def _missing_notes(model: BenchModel, bridge: Bridge) -> list[str]:
     said = []
+    balance, worst = max(((_ratio_part(bridge, band, _POWER_W), band) for band in bridge.bands), key=lambda one: one[0])
+    cost = (
+        f"at {_POWER_W:g} W reflected over forward power is known to {100.0 * balance:.0f} %, so that {_mhz(worst)} "
+        f"reads SWR {_SWR} as {swr_span(worst, ratio_part=balance)} instead of {swr_span(worst)}"
+    )
     if len(model.of_kind["reversed"]) == 0:
-        said.append("no reversed step: the reflected detector's law leans on the forward one's")
+        said.append(f"no reversed step: the reflected detector's law and gain lean on the forward one's; {cost}")
     if len(model.of_kind["load"]) == 0:
-        said.append("no load step: the balance of the two detectors rests on the wattmeter alone")
+        said.append(f"no load step: the balance of the two detectors rests on the wattmeter alone; {cost}")
     elif len({part.text for part in model.parts}) == 1:
         said.append(
             f"one load only, {model.parts[0].text}: it cannot tell the balance of the detectors from the leaks; "
-            "wanted one on either side of 50 ohm, like 25 and 100"
+            f"wanted one on either side of 50 ohm, like 25 and 100; {cost}"
         )
     powers = [model.steps[at].power_w or 0.0 for at in model.of_kind["power"] if model.weights[at] > 0.0]
     if max(powers) < 3.0 * min(powers):
@@ -127,10 +152,15 @@ def _law_notes(model: BenchModel, solution: Solution, bridge: Bridge) -> list[st
             said.append(
                 f"the {name} detector's law is not determined below {watts:.2g} W: there at {watts / 10.0:.2g} W a "
                 f"power is known to {100.0 * tenth:.0f} % instead of {100.0 * here:.1f} %, the wattmeter's own "
-                "accuracy aside"
+                f"accuracy aside, and SWR {_SWR} reads {_span_at(bridge, band, watts / 10.0)} instead of "
+                f"{_span_at(bridge, band, watts)}"
             )
         said += _load_term_note(model, solution, side, name)
     return said
+
+
+def _span_at(bridge: Bridge, band: Band, power_w: float) -> str:
+    return swr_span(band, ratio_part=_ratio_part(bridge, band, power_w))
 
 
 def _load_term_note(model: BenchModel, solution: Solution, side: int, name: str) -> list[str]:

@@ -177,7 +177,7 @@ def _in_company(alone: Proposal, foresight: Foresight, few: list[int], joint: fl
 
 
 def _best_few(foresight: Foresight, band: int) -> list[int]:
-    """The _AHEAD candidates of a band that together narrow its interval most: of all, the idlest are dropped in turn."""
+    """The _AHEAD candidates of a band that together narrow its interval most: the idlest of all are dropped in turn."""
     chosen = [n for n, of in enumerate(foresight.bands) if of == band]
     while len(chosen) > _AHEAD:
         known = foresight.after(chosen)
