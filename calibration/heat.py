@@ -125,7 +125,7 @@ class BenchHeat:
 
     def verdict(self, power_w: float, seconds: float, *, load: str | None = None) -> HeatVerdict:
         """Whether `power_w` [W] may go into `load` (None: the dummy) for `seconds` [s] now."""
-        part, name = self.store(load), "the dummy load" if load is None else f"the {load} ohm load"
+        part, name = self.store(load), "the dummy load" if load is None else f"the {load} ohm load" if load[:1].isdigit() else f"the {load}"
         hold, room = part.hold_s(power_w, seconds), part.room_s(power_w)
         held = math.nan if part.joules is None else part.held / part.joules
         if hold <= _NO_WAIT_S:

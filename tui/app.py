@@ -17,6 +17,7 @@ from textual.binding import Binding, BindingType
 from textual.message import Message
 
 from .alarm import Alarm, AlarmState, KeyClock, Limits
+from .bench_tap import BenchSetting
 from .drawing.glyphs import glyphs
 from .drawing.journal import journal_trouble
 from .mailbox import Delivery, Mailbox
@@ -71,15 +72,17 @@ class BridgewrightApp(App[None]):
         limits: Limits | None = None,
         rate_hz: float = 20.0,
         live_dark: bool = False,
+        bench: BenchSetting | None = None,
         clock: Callable[[], float] = time.monotonic,
     ) -> None:
-        """`rate_hz` [Hz] is the rate at which the feed sends readings; `clock` [s] must be steady."""
+        """`rate_hz` [Hz] is the rate at which the feed sends readings; `clock` [s] must be steady. bench: its file."""
         with no_color(not color):
             super().__init__(ansi_color=None if color else True)
         self._feed, self._clock, self._color = feed, clock, color
         self._shown, self._screens = screen, dict[str, LiveScreen]()
         self.glyphs = glyphs(ascii)
         self.limits = limits or Limits()
+        self.bench = bench
         least_s, mean_s = (1.0 / (paints * rate_hz) for paints in (_PAINTS_PER_READING, _LASTING_PAINTS))
         self.mailbox = Mailbox(self._wake, least_s, clock, mean_s)
         self._snapshot = Snapshot()
@@ -175,8 +178,8 @@ class BridgewrightApp(App[None]):
             self.theme = THEMES[1 if self.current_theme.dark else 0].name
 
     def action_next_screen(self) -> None:
-        """The next screen of SCREENS, after the last one the first."""
-        names = list(SCREENS)
+        """The next screen of SCREENS, after the last one the first; the bench only where one is open."""
+        names = [name for name in SCREENS if name != "bench" or self.bench or name == self._shown]
         self.show_screen(names[(names.index(self._shown) + 1) % len(names)])
 
     def action_help(self) -> None:
@@ -262,7 +265,7 @@ class BridgewrightApp(App[None]):
             self._alarm.lapse()
         self._ring(frozenset((*view.alarm.over, *journal_trouble(view.snapshot.journal))))
         for screen in self.screen_stack[-1:]:  # none is left while the program ends
-            if isinstance(screen, LiveScreen):
+            if isinstance(screen, LiveScreen) and screen.is_mounted:  # one that is being made paints itself
                 screen.paint(view)
 
     def _view(self) -> View:

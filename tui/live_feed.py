@@ -25,6 +25,8 @@ if TYPE_CHECKING:
     from bridgeio.receiver import Receiver
     from calibration.readings import Readings
 
+    from .bench_tap import BenchTap
+
 __all__ = ["Keeping", "LiveFeed"]
 
 #: The rate shown is that of the last readings' arrivals within this time [s].
@@ -46,12 +48,13 @@ class LiveFeed:
         self,
         prepare: Callable[[], tuple[Source, Receiver, Desk]],
         keeping: Callable[[Source], Keeping] | None = None,
+        tap: BenchTap | None = None,
     ) -> None:
         """`prepare` may raise what the command line turns into words; `start` lets it through.
 
-        keeping: asked after `prepare`; what comes goes into that journal too.
+        keeping: asked after `prepare`; what comes goes into that journal too. tap: what comes is left there too.
         """
-        self._prepare, self._keeping = prepare, keeping
+        self._prepare, self._keeping, self._tap = prepare, keeping, tap
         self._link: Link | None = None
         self._desk: Desk | None = None
         self._receiver: Receiver | None = None
@@ -75,6 +78,8 @@ class LiveFeed:
         from bridgeio.link import Link
 
         source, self._receiver, self._desk = self._prepare()
+        if self._tap is not None:
+            self._tap.hands = getattr(source, "hands", None)
         self._watch = LineWatch(source, self._receiver, self._desk)
         self._post = post
         if self._keeping is not None:
@@ -136,6 +141,8 @@ class LiveFeed:
             self._arrival_s = arrival_s
             self._facts = self._watch.facts(now_s) if due else self._facts
             self._send()
+        if self._tap is not None:
+            self._tap.put(items, self._desk.temperature_c)
         self._after(items, now_s if due else None)
 
     def _after(self, items: list[Item], due_s: float | None) -> None:

@@ -17,7 +17,7 @@ from calibration.bench import BenchRatings, BenchStep
 from . import coupler, detector, feed
 from .station import source_lift
 
-__all__ = ["FREQUENCIES_HZ", "RATINGS", "Setup", "bench_setups", "bench_steps"]
+__all__ = ["FREQUENCIES_HZ", "RATINGS", "Setup", "bench_setups", "bench_steps", "set_up"]
 
 Array = npt.NDArray[np.float64]
 
@@ -38,6 +38,7 @@ RATINGS = BenchRatings(reference_pct=5.0, dummy_return_loss_db=36.0, resistor_pc
 
 METER_GAIN, METER_SCATTER = 1.018, 0.006  # the wattmeter reads high, and not always the same
 LINE_DEG, LINE_LOSS_DB = 44.6, 0.03  # what is sold and written down as 45 degrees
+MADE_OF = 1.004  # a resistor that is not in the drawer is so many times what is written on it
 
 
 @dataclass(frozen=True, slots=True)
@@ -117,6 +118,26 @@ def bench_setups(seed: int = 1) -> list[Setup]:
     return list(_setups(np.random.default_rng([seed, 2])))
 
 
+def set_up(
+    kind: str,
+    frequency_hz: float | None,
+    power_w: float | None,
+    load: str | None,
+    line_deg: float,
+    chance: np.random.Generator,
+) -> Setup:
+    """Connect what a bench step asks for, with this bench's own parts and wattmeter; dark has no power on.
+
+    power_w [W]: as the transmitter gives a matched load. ValueError where a load is none that can be made.
+    """
+    if kind == "dark" or frequency_hz is None or power_w is None:
+        return Setup("dark", (0.0, 0.0))
+    bench = _Bench(chance)
+    if kind == "load":
+        return bench.load(frequency_hz, load or "", power_w, line_deg)
+    return bench.power(kind, frequency_hz, power_w)
+
+
 def _setups(chance: np.random.Generator) -> Iterator[Setup]:
     bench = _Bench(chance)
     yield Setup("dark", (0.0, 0.0))
@@ -145,11 +166,19 @@ class _Bench:
 
     def load(self, frequency_hz: float, name: str, power_w: float, line_deg: float = 0.0) -> Setup:
         """A known load, directly or behind line; power [W] as the transmitter gives a matched one."""
-        gamma = LOADS[name].gamma(frequency_hz)
+        gamma = _gamma(name, frequency_hz)
         if line_deg:
-            gamma *= 10.0 ** (-LINE_LOSS_DB / 10.0) * np.exp(-2j * np.radians(LINE_DEG))
+            gamma *= 10.0 ** (-LINE_LOSS_DB / 10.0) * np.exp(-2j * np.radians(line_deg * (LINE_DEG / 45.0)))
         ports_v = _ports_v(coupler.looking_forward(frequency_hz), gamma, power_w)
         return Setup("load", ports_v, frequency_hz=frequency_hz, load=name, line_deg=line_deg)
+
+
+def _gamma(name: str, frequency_hz: float) -> complex:
+    """Reflection of a load by its name; one that is not in the drawer is made of parts a little off."""
+    if name in LOADS:
+        return LOADS[name].gamma(frequency_hz)
+    wanted = complex(name.replace(" ", "").replace("i", "j"))
+    return _Part(MADE_OF * wanted.real).gamma(frequency_hz) if not wanted.imag else complex(feed.reflection(wanted))
 
 
 class _Converter:

@@ -26,6 +26,7 @@ from bridgeio.codes import (
 from bridgeio.frames import Conditions, Crest, Item, Nameplate, Tallies
 
 from . import detector
+from .hands import Hands
 from .options import Scenario
 from .station import Station
 
@@ -41,6 +42,7 @@ FULL_SCALE = detector.TOP_CODE * detector.SUMMED
 FIRMWARE_VERSION = 0x0100
 SUPPLY_MV = 4980
 BLOCK_S = 0.5  # computed at a time: long enough for arrays to pay, short enough to start quickly
+HANDS_BLOCK_S = 0.1  # and where somebody keys by hand, who wants to see it
 CONVERSION_S = 0.000625  # spacing of conversions at 100 tallies a second and below
 
 
@@ -57,9 +59,9 @@ class Block:
 class Board:
     """Detectors and converter of one scenario. Ask for blocks in order: the hold capacitor remembers."""
 
-    def __init__(self, scenario: Scenario, boot: int = 1) -> None:
+    def __init__(self, scenario: Scenario, boot: int = 1, station: Station | Hands | None = None) -> None:
         self._rate = scenario.rate
-        self._station = Station(scenario)
+        self._station = station or Station(scenario)
         self._channels = [
             (part, detector.Table(part, scenario.temperature_c), detector.Held(part.hold_s))
             for part in (detector.FORWARD, detector.REFLECTED)
@@ -85,15 +87,15 @@ class Board:
         return Block(t_s, codes[0], codes[1], key[:, -1] > 0.0)
 
 
-def transmissions(scenario: Scenario, boot: int = 1) -> Iterator[tuple[float, bytes]]:
+def transmissions(scenario: Scenario, boot: int = 1, hands: Hands | None = None) -> Iterator[tuple[float, bytes]]:
     """Wire bytes of frame after frame, each with the device time [s] it is sent at.
 
     Ends with duration or silence. Equal arguments give equal bytes. Frames that `drop` takes leave their gap
-    in the sequence numbers.
+    in the sequence numbers. hands: who works at the bench; what is sent then follows from what they do, too.
     """
     plates = _at(itertools.chain((0.0, 0.3, 0.6), itertools.count(2.0, 2.0)), _nameplate(scenario, boot))
-    surroundings = _at(itertools.count(0.0, 1.0), _conditions(scenario))
-    schedule = heapq.merge(plates, surroundings, _counts(scenario, boot), key=itemgetter(0))
+    surroundings = _at(itertools.count(0.0, 1.0), _conditions(scenario, hands))
+    schedule = heapq.merge(plates, surroundings, _counts(scenario, boot, hands), key=itemgetter(0))
     end_s = min(scenario.duration_s or np.inf, np.inf if scenario.silent_s is None else scenario.silent_s)
     faults = np.random.default_rng([scenario.seed, boot, 1])
     if scenario.wire == "binary":
@@ -112,9 +114,9 @@ def _at(times_s: Iterator[float], make_at: Callable[[float], Maker]) -> Iterator
     return ((due_s, make_at(due_s)) for due_s in times_s)
 
 
-def _counts(scenario: Scenario, boot: int) -> Iterator[tuple[float, Maker]]:
-    board = Board(scenario, boot)
-    count = max(1, round(scenario.rate * BLOCK_S))
+def _counts(scenario: Scenario, boot: int, hands: Hands | None) -> Iterator[tuple[float, Maker]]:
+    board = Board(scenario, boot, hands)
+    count = max(1, round(scenario.rate * (BLOCK_S if hands is None else HANDS_BLOCK_S)))
     for first in itertools.count(0, count):
         block = board.block(first, count)
         flags = _flags(block)
@@ -185,13 +187,17 @@ def _nameplate(scenario: Scenario, boot: int) -> Callable[[float], Maker]:
     return lambda due_s: lambda seq: Nameplate(seq, _ms(due_s), **fixed, name=NAME)
 
 
-def _conditions(scenario: Scenario) -> Callable[[float], Maker]:
-    station = Station(scenario)
+def _conditions(scenario: Scenario, hands: Hands | None) -> Callable[[float], Maker]:
+    station = hands or Station(scenario)
     centi_c = round(100.0 * scenario.temperature_c)
 
     def make_at(due_s: float) -> Maker:
-        hertz = round(float(station.frequency_hz(np.asarray(due_s))))
-        return lambda seq: Conditions(seq, _ms(due_s), centi_c, SUPPLY_MV, hertz)
+        def make(seq: int) -> Conditions:
+            # Asked when it is sent: hands may have changed the band since the frame was planned.
+            hertz = round(float(station.frequency_hz(np.asarray(due_s))))
+            return Conditions(seq, _ms(due_s), centi_c, SUPPLY_MV, hertz)
+
+        return make
 
     return make_at
 

@@ -1,6 +1,6 @@
 """The simulated bridge as a source: opens, reads and closes like a port, in real time or faster.
 
-One rule: bytes depend on the options alone; the clock only decides when they are handed out.
+One rule: bytes depend on the options alone, and at the bench on hands; the clock only decides when they are handed out.
 """
 
 from __future__ import annotations
@@ -14,6 +14,7 @@ from bridgeio.errors import EndOfSource, LinkError
 from .options import parse_options
 
 if TYPE_CHECKING:
+    from .hands import Hands
     from .station import Station
 
 __all__ = ["SimulatedSource"]
@@ -39,6 +40,8 @@ class SimulatedSource:
         self.scenario = parse_options(text)
         self.live = self.scenario.pace == "real"
         self._clock, self._sleep = clock, sleep
+        #: Who keys and connects by hand, where `at_the_bench` was called.
+        self.hands: Hands | None = None
         self._boot = 0
         self._frames: Iterator[tuple[float, bytes]] = iter(())
         self._next: tuple[float, bytes] | None = None
@@ -51,12 +54,20 @@ class SimulatedSource:
 
         return Station(self.scenario)
 
+    def at_the_bench(self) -> Hands:
+        """From the next opening on transmitter, loads and key are worked by hand. What mode, antenna and line of the
+        scenario say no longer holds."""
+        from .hands import Hands
+
+        self.hands = self.hands or Hands(self.scenario.frequency_hz, self.scenario.seed)
+        return self.hands
+
     def open(self) -> None:
         """Switch the bridge on; every opening is a new start, with device time from 0."""
         from .board import transmissions  # numpy is loaded here, after the first paint of a screen
 
         self._boot += 1
-        self._frames = transmissions(self.scenario, self._boot)
+        self._frames = transmissions(self.scenario, self._boot, self.hands)
         self._next = next(self._frames, None)
         self._started_s = self._clock()
         self._read_s = 0.0

@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     from bridgeio.ports import Source
     from bridgeio.receiver import Receiver
     from tui.alarm import Limits
+    from tui.bench_tap import BenchSetting
     from tui.live_feed import Keeping
     from tui.messages import Feed, Snapshot
 
@@ -40,8 +41,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
         "--rate", type=positive, metavar="HZ", help="paints a second on the screen (20), sentences with --plain (1)"
     )
+    parser.add_argument("--screen", type=_screen, metavar="NAME", help="the screen to begin with (tune-up); key s")
     parser.add_argument(
-        "--screen", type=_screen, default="tune-up", metavar="NAME", help="the screen to begin with (tune-up); key s"
+        "--bench", metavar="FILE", help="calibrate: the Bench screen on this sheet or bridge file, new or to go on with"
     )
     parser.add_argument(
         "--journal", metavar="FILE", help="keep all that comes, as `keep` does; continued if it is there"
@@ -53,23 +55,29 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(args: argparse.Namespace) -> int:
     """Show readings until the user quits or, with --plain, until the source ends."""
+    from tui.door import say
     from tui.live_feed import LiveFeed
     from tui.terminal import terminal
 
     shown_on = terminal(os.environ, sys.stdout.encoding, sys.stdout.isatty() and sys.stdin.isatty())
-    feed = LiveFeed(lambda: _prepare(args), _keeping(args))
+    if misuse := _misused(args, shown_on.screen and not args.plain):
+        say(f"bridgewright watch: {misuse}")
+        return 2
+    bench = _bench(args)
+    feed = LiveFeed(lambda: _prepare(args), _keeping(args), None if bench is None else bench.tap)
     if args.plain or not shown_on.screen:
         return _in_sentences(feed, args.rate or _PLAIN_HZ)
     from tui.app import BridgewrightApp
 
     app = BridgewrightApp(
         feed,
-        screen=args.screen,
+        screen=args.screen or ("tune-up" if bench is None else "bench"),
         ascii=shown_on.ascii,
         color=shown_on.color,
         limits=_limits(args),
         rate_hz=args.rate or _SCREEN_HZ,
         live_dark=args.dark == "live",
+        bench=bench,
     )
     app.run()
     return app.return_code or 0
@@ -77,12 +85,33 @@ def run(args: argparse.Namespace) -> int:
 
 def _prepare(args: argparse.Namespace) -> tuple[Source, Receiver, Desk]:
     from bridgeio.ports import open_source
+    from bridgeio.simulator.source import SimulatedSource
     from tui.commands.reading import desk_for, receiver_for
 
     source = open_source(args.source, args.baud)
+    if args.bench and isinstance(source, SimulatedSource):
+        source.at_the_bench()
     made = source, receiver_for(args, source), desk_for(args, source)
     _tame_the_collector()
     return made
+
+
+def _misused(args: argparse.Namespace, on_a_screen: bool) -> str:
+    """What is wrong with how the bench is asked for, "" where nothing is."""
+    if args.screen == "bench" and args.bench is None:
+        return "--screen bench needs a file: --bench FILE, new or to go on with"
+    if args.bench is not None and not on_a_screen:
+        return "--bench is a screen; wanted a terminal, and no --plain"
+    return ""
+
+
+def _bench(args: argparse.Namespace) -> BenchSetting | None:
+    """What --bench opens."""
+    from pathlib import Path
+
+    from tui.bench_tap import BenchSetting
+
+    return None if args.bench is None else BenchSetting(Path(args.bench), simulated=args.source.startswith("sim:"))
 
 
 def _keeping(args: argparse.Namespace) -> Callable[[Source], Keeping] | None:

@@ -15,7 +15,8 @@ class Glyphs:
     """track, tick, left_end, right_end, infinity: the scale. band_left, band, band_right, open_right: the interval.
     mark: the reading, old_mark when stale. best: the rule of the best point. limit: the alarm limit. delivered,
     returned, empty: the ribbon, old when stale. towards, away, same: direction. bars: a histogram's heights, lowest
-    first. dots: the thread in braille dots."""
+    first. point, coming, wall: a law's measured point, the one to come, the plot's left edge. taken, refused, chosen:
+    marks of bench steps. dots: the thread in braille dots."""
 
     track: str
     tick: str
@@ -38,6 +39,12 @@ class Glyphs:
     away: str
     same: str
     bars: str
+    point: str
+    coming: str
+    wall: str
+    taken: str
+    refused: str
+    chosen: str
     dots: bool
 
 
@@ -63,6 +70,12 @@ ASCII = Glyphs(
     away=">>",
     same="==",
     bars=".:-=+*%#",
+    point="o",
+    coming="O",
+    wall="|",
+    taken="+",
+    refused="x",
+    chosen=">",
     dots=False,
 )
 
@@ -88,6 +101,12 @@ UTF8 = Glyphs(
     away="▶▶",
     same="══",
     bars="▁▂▃▄▅▆▇█",
+    point="●",
+    coming="○",
+    wall="│",
+    taken="✓",
+    refused="✗",
+    chosen="▶",
     dots=True,
 )
 

@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
+from .bench import Bench
 from .link import LinkScreen
 from .live import LiveScreen
 from .tune_up import TuneUp
 
 __all__ = ["SCREENS", "LiveScreen"]
 
-SCREENS: dict[str, type[LiveScreen]] = {"tune-up": TuneUp, "link": LinkScreen}
+SCREENS: dict[str, type[LiveScreen]] = {"tune-up": TuneUp, "link": LinkScreen, "bench": Bench}

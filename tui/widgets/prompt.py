@@ -1,6 +1,7 @@
 """One line that asks for a text while the reading above it stays alive.
 
-One rule: an answer that cannot be used stays in the line with the reason beside it; Escape leaves all as it was.
+One rule: an answer that cannot be used stays in the line with the reason beside it; Escape leaves all as it was. An
+answer may bring the next question.
 """
 
 from __future__ import annotations
@@ -29,7 +30,9 @@ class Prompt(Horizontal):
         """A hidden prompt."""
         super().__init__(id=id)
         self._use: Callable[[str], None] = lambda text: None
+        self._leave: Callable[[], None] = lambda: None
         self._question = ""
+        self._asked = 0
         self.display = False
 
     def compose(self) -> ComposeResult:
@@ -37,16 +40,19 @@ class Prompt(Horizontal):
         yield Rows("prompt-question")
         yield Input(compact=True, select_on_focus=False)
 
-    def ask(self, question: str, answer: str, use: Callable[[str], None]) -> None:
-        """Ask; `use` takes the answer and raises ValueError with the reason where it cannot."""
-        self._use, self._question = use, question
+    def ask(
+        self, question: str, answer: str, use: Callable[[str], None], leave: Callable[[], None] = lambda: None
+    ) -> None:
+        """Ask; `use` takes the answer, and raises ValueError with the reason where it cannot; Escape calls `leave`."""
+        self._use, self._leave, self._question = use, leave, question
+        self._asked += 1
         self._swap(asking=True)
         self.question.styles.width = len(question) + 1
         self.question.show([((question, "strong"),)])
         line = self.query_one(Input)
         line.value = answer
         line.cursor_position = len(answer)
-        line.focus()
+        self.screen.set_focus(line)  # at once: the next key is already for the answer
 
     @property
     def question(self) -> Rows:
@@ -56,19 +62,28 @@ class Prompt(Horizontal):
     def on_input_submitted(self, event: Input.Submitted) -> None:
         """Use the answer, or say why not."""
         event.stop()
+        asked = self._asked
         try:
             self._use(event.value)
         except ValueError as error:
             self._refuse(str(error))
             return
-        self.action_dismiss()
+        if asked == self._asked:
+            self.withdraw()
 
     def on_descendant_blur(self, event: events.DescendantBlur) -> None:
-        """A click elsewhere leaves the question."""
-        self.action_dismiss()
+        """A click elsewhere leaves the question; word of the last one's end may come when the next is already asked."""
+        if self.screen.focused is not self.query_one(Input):
+            self.action_dismiss()
 
     def action_dismiss(self) -> None:
-        """Hide without using the answer; the keys come back in the same line."""
+        """Hide without using the answer."""
+        if self.display:
+            self.withdraw()
+            self._leave()
+
+    def withdraw(self) -> None:
+        """The question is over; the keys come back in the same line."""
         if self.display:
             self._swap(asking=False)
             self.screen.set_focus(None)
