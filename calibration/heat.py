@@ -125,7 +125,7 @@ class BenchHeat:
 
     def verdict(self, power_w: float, seconds: float, *, load: str | None = None) -> HeatVerdict:
         """Whether `power_w` [W] may go into `load` (None: the dummy) for `seconds` [s] now."""
-        part, name = self.store(load), "the dummy load" if load is None else f"the {load} ohm load" if load[:1].isdigit() else f"the {load}"
+        part, name = self.store(load), _named(load)
         hold, room = part.hold_s(power_w, seconds), part.room_s(power_w)
         held = math.nan if part.joules is None else part.held / part.joules
         if hold <= _NO_WAIT_S:
@@ -156,3 +156,9 @@ def _words(part: HeatStore, name: str, power_w: float, seconds: float, hold: flo
 def _g(joules: float) -> str:
     """Joules for a sentence: whole ones, or three digits below ten."""
     return f"{joules:.0f}" if joules >= 10.0 else f"{joules:.3g}"
+
+
+def _named(load: str | None) -> str:
+    if load is None:
+        return "the dummy load"
+    return f"the {load} ohm load" if load[:1].isdigit() else f"the {load}"
