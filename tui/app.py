@@ -17,7 +17,7 @@ from textual.binding import Binding, BindingType
 from textual.message import Message
 
 from .alarm import Alarm, AlarmState, KeyClock, Limits
-from .bench_tap import BenchSetting
+from .bench.tap import BenchSetting
 from .drawing.glyphs import glyphs
 from .drawing.journal import journal_trouble
 from .mailbox import Delivery, Mailbox

@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from bridgeio.receiver import Receiver
     from calibration.readings import Readings
 
-    from .bench_tap import BenchTap
+    from .bench.tap import BenchTap
 
 __all__ = ["Keeping", "LiveFeed"]
 

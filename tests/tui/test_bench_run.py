@@ -5,9 +5,9 @@ import pytest
 
 from calibration.bench import BenchStep
 from calibration.candidates import Candidate, Limits
-from tui.bench_ground import Ground
-from tui.bench_run import BenchRun
-from tui.meter_reading import MeterReading, reading_of
+from tui.bench.ground import Ground
+from tui.bench.meter_reading import MeterReading, reading_of
+from tui.bench.run import BenchRun
 
 MAIN_HZ = 14.1e6
 DARK = BenchStep("dark", 100.0, 50.0, forward_sd=3.0, reflected_sd=3.0, samples=200)

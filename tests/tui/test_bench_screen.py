@@ -18,14 +18,14 @@ from calibration.slip_names import Slip
 from tests.terminal import HOSTILE
 from tests.tui.fakes import HandFeed, picture, snapshot, uncalibrated, until
 from tui.app import BridgewrightApp
-from tui.bench_answers import head_from, head_questions, step_from, step_questions
-from tui.bench_law import LawPicture, law_picture
-from tui.bench_list import Entry, choices, taken
-from tui.bench_mind import Thought, think
-from tui.bench_queries import Queries
-from tui.bench_scene import scene_of
-from tui.bench_tap import BenchSetting
-from tui.bench_work import BenchWork
+from tui.bench.answers import head_from, head_questions, step_from, step_questions
+from tui.bench.choices import Entry, choices, taken
+from tui.bench.law import LawPicture, law_picture
+from tui.bench.mind import Thought, think
+from tui.bench.queries import Queries
+from tui.bench.scene import scene_of
+from tui.bench.tap import BenchSetting
+from tui.bench.work import BenchWork
 from tui.drawing.bench import Scene, draw_bench
 from tui.drawing.glyphs import ASCII, UTF8
 from tui.drawing.law_plot import draw_law

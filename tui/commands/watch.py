@@ -22,7 +22,7 @@ if TYPE_CHECKING:
     from bridgeio.ports import Source
     from bridgeio.receiver import Receiver
     from tui.alarm import Limits
-    from tui.bench_tap import BenchSetting
+    from tui.bench.tap import BenchSetting
     from tui.live_feed import Keeping
     from tui.messages import Feed, Snapshot
 
@@ -109,7 +109,7 @@ def _bench(args: argparse.Namespace) -> BenchSetting | None:
     """What --bench opens."""
     from pathlib import Path
 
-    from tui.bench_tap import BenchSetting
+    from tui.bench.tap import BenchSetting
 
     return None if args.bench is None else BenchSetting(Path(args.bench), simulated=args.source.startswith("sim:"))
 

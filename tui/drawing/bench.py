@@ -15,8 +15,8 @@ from .law_plot import draw_law
 from .line import Line, Piece, Row, fit, outside, width_of
 
 if TYPE_CHECKING:
-    from ..bench_law import LawPicture
-    from ..bench_list import Entry
+    from ..bench.choices import Entry
+    from ..bench.law import LawPicture
 
 __all__ = ["Asking", "Scene", "draw_asking", "draw_bench"]
 

@@ -14,7 +14,7 @@ from .glyphs import Glyphs
 from .line import Line, Row, fit
 
 if TYPE_CHECKING:
-    from ..bench_law import LawPicture
+    from ..bench.law import LawPicture
 
 __all__ = ["draw_law"]
 

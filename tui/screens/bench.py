@@ -19,7 +19,7 @@ from ..widgets.rows import Rows
 from .live import LiveScreen
 
 if TYPE_CHECKING:
-    from ..bench_work import BenchWork
+    from ..bench.work import BenchWork
 
 __all__ = ["KEYS", "SIMULATED_KEY", "Bench"]
 
@@ -175,7 +175,7 @@ class Bench(LiveScreen):
         """Open the file; an error ends the program, which says it in words."""
         from bridgeio.errors import BridgeIOError
 
-        from ..bench_work import BenchWork
+        from ..bench.work import BenchWork
 
         assert self.owner.bench is not None
         try:
@@ -187,7 +187,7 @@ class Bench(LiveScreen):
 
     def _ask(self) -> None:
         """Open the line for what is to be typed now, and close it where nothing is."""
-        from ..bench_scene import reading_question
+        from ..bench.scene import reading_question
 
         work, prompt = self._work, self.query_one(Prompt)
         if work is None or not self.is_current:
@@ -214,7 +214,7 @@ class Bench(LiveScreen):
             self.redraw()
 
     def _use_reading(self, text: str) -> None:
-        from ..bench_scene import reading_question
+        from ..bench.scene import reading_question
 
         if self._work is not None and self._work.run is not None:
             self._work.run.answer(text.strip() or reading_question(self._work.run)[1])
@@ -230,7 +230,7 @@ class Bench(LiveScreen):
         """Bridge, frequency, link and key; the key as the counts show it, by the sheet's own dark step."""
         if self._work is None:
             return draw_status(view.snapshot, view.key, view.limits, width, self.glyphs)
-        from ..bench_scene import status_of
+        from ..bench.scene import status_of
 
         snapshot, key = status_of(self._work, view.snapshot)
         return draw_status(snapshot, key, view.limits, width, self.glyphs)
@@ -242,7 +242,7 @@ class Bench(LiveScreen):
             return [Line(width).row(), *(Line(width).put(0, text).row() for text in _NO_FILE)]
         if self._work is None:
             return [Line(width).row(), Line(width).put(0, "the file is being opened", "quiet").row()]
-        from ..bench_scene import asking_of, scene_of
+        from ..bench.scene import asking_of, scene_of
 
         asking = asking_of(self._work)
         if asking is not None:

@@ -8,7 +8,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import Any
 
-from .bench_answers import Question
+from .answers import Question
 
 __all__ = ["Queries"]
 

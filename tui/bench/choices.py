@@ -14,7 +14,7 @@ from calibration.bench import BenchStep
 from calibration.candidates import Candidate, band_words
 from calibration.next_step import Proposal
 
-from .bench_mind import Thought
+from .mind import Thought
 
 __all__ = ["Entry", "choices", "forecast", "plan_words", "span_words", "taken"]
 

@@ -18,7 +18,7 @@ from calibration.cautions import cautions, refusal
 from calibration.heat import BenchHeat, taken_w
 from calibration.steady import Steadiness, Steady, Taking
 
-from .bench_ground import Ground, draft
+from .ground import Ground, draft
 from .meter_reading import MeterReading, Unit, reading_of
 
 __all__ = ["POWERED", "BenchRun"]

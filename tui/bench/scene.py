@@ -12,17 +12,17 @@ from typing import TYPE_CHECKING
 from calibration.candidates import Candidate
 from calibration.cautions import cautions
 
-from .alarm import KeyState
-from .bench_ground import draft
-from .bench_law import LawPicture, law_picture
-from .bench_list import Entry, forecast, plan_words, taken
-from .bench_run import POWERED, BenchRun
-from .drawing.bench import Asking, Scene
-from .drawing.line import Piece
+from ..alarm import KeyState
+from ..drawing.bench import Asking, Scene
+from ..drawing.line import Piece
+from .choices import Entry, forecast, plan_words, taken
+from .ground import draft
+from .law import LawPicture, law_picture
+from .run import POWERED, BenchRun
 
 if TYPE_CHECKING:
-    from .bench_work import BenchWork
-    from .messages import Snapshot
+    from ..messages import Snapshot
+    from .work import BenchWork
 
 __all__ = ["asking_of", "reading_question", "scene_of", "status_of"]
 

@@ -12,7 +12,7 @@ from bridgeio.bridge_file import parse_bridge_file, sheet_text
 from bridgeio.errors import FileError
 from bridgeio.fit_table import FitTable, write_fit
 
-from .bench_mind import Thought
+from .mind import Thought
 
 __all__ = ["put_fit"]
 

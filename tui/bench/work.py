@@ -17,15 +17,15 @@ from bridgeio.frames import Conditions, Nameplate, Tallies
 from calibration.bench import BenchStep
 from calibration.candidates import Candidate
 
-from .bench_answers import head_from, head_questions, step_from, step_questions
-from .bench_ground import Ground, another_board
-from .bench_list import Entry, choices
-from .bench_mind import BenchMind, Thought
-from .bench_put import put_fit
-from .bench_queries import Queries
-from .bench_run import BenchRun
-from .bench_tap import BenchSetting, Drop, device_times_s
+from .answers import head_from, head_questions, step_from, step_questions
+from .choices import Entry, choices
+from .ground import Ground, another_board
 from .meter_reading import UNITS
+from .mind import BenchMind, Thought
+from .put import put_fit
+from .queries import Queries
+from .run import BenchRun
+from .tap import BenchSetting, Drop, device_times_s
 
 __all__ = ["BenchWork"]
 
