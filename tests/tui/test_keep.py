@@ -13,10 +13,10 @@ from bridgeio.simulator import BRIDGE_FILE
 ROOT = Path(__file__).parents[2]
 
 
-def keep(*words):
-    """The command as a child."""
+def keep(*words, before=()):
+    """The command as a child; `before`: what starts it."""
     return subprocess.Popen(
-        [sys.executable, "-m", "tui", "keep", *map(str, words)],
+        [*before, sys.executable, "-m", "tui", "keep", *map(str, words)],
         cwd=ROOT,
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
@@ -60,9 +60,9 @@ def test_keep_records_all_that_a_source_sends(tmp_path):
 
 
 def test_keep_ends_whole_at_a_signal_and_goes_on_in_the_same_journal(tmp_path):
-    """SIGTERM and SIGINT end it with exit code 0 and a complete journal; the next run continues the file."""
+    """SIGTERM, SIGINT and SIGHUP end it with exit code 0 and a complete journal; the next run continues the file."""
     path = tmp_path / "log"
-    for number in (signal.SIGTERM, signal.SIGINT):
+    for number in (signal.SIGTERM, signal.SIGINT, signal.SIGHUP):
         before = blocks(path)
         child = keep("sim:", path)
         until(lambda before=before: blocks(path) > before)
@@ -113,3 +113,19 @@ def test_keep_must_be_told_its_source(tmp_path):
     assert child.returncode == 4
     assert "/dev/nothing-here" in words
     assert os.listdir(tmp_path)
+
+
+def test_keep_outlives_its_terminal_where_that_was_asked_for(tmp_path):
+    """Under nohup SIGHUP stops nothing: blocks go on coming after it."""
+    path = tmp_path / "log"
+    child = keep("sim:", path, before=("nohup",))
+    try:
+        until(lambda: blocks(path) > 0)
+        child.send_signal(signal.SIGHUP)
+        seen = blocks(path)
+        until(lambda: blocks(path) > seen + 1)
+        child.send_signal(signal.SIGTERM)
+        _, words = child.communicate(timeout=20)
+        assert child.returncode == 0, words
+    finally:
+        child.kill()

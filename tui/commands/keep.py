@@ -122,9 +122,11 @@ class _Acknowledgement:
 
 @contextmanager
 def _told_to_stop() -> Iterator[threading.Event]:
-    """An event that SIGINT and SIGTERM set, while it lasts."""
+    """An event that SIGINT, SIGTERM and the terminal's end set, while it lasts; not the last under nohup."""
     told = threading.Event()
-    numbers = (signal.SIGINT, signal.SIGTERM)
+    numbers = [signal.SIGINT, signal.SIGTERM]
+    if hasattr(signal, "SIGHUP") and signal.getsignal(signal.SIGHUP) is not signal.SIG_IGN:
+        numbers.append(signal.SIGHUP)
     before = [signal.signal(number, lambda *_: told.set()) for number in numbers]
     try:
         yield told
