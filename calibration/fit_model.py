@@ -213,9 +213,17 @@ class BenchModel:
         return np.concatenate([told, of_parameter[np.isfinite(sd)], alike, np.arange(len(self.bands))])
 
     @cached_property
+    def load_kinds(self) -> Places:
+        """How many loads unlike each other (a part, or a part behind a line) each band has been shown, int[bands]."""
+        at = self.of_kind["load"]
+        used = self.weights[at] > 0.0
+        seen = set(zip(self.band[at][used], self._part[used], self._line[used], strict=True))
+        return np.array([sum(band == own for own, _, _ in seen) for band in range(len(self.bands))], dtype=int)
+
+    @property
     def has_loads(self) -> npt.NDArray[np.bool_]:
         """Which bands have load steps, bool[bands]."""
-        return np.isin(np.arange(len(self.bands)), self.band[self.of_kind["load"]])
+        return np.asarray(self.load_kinds > 0)
 
     def turned(self, vector: Array) -> Array:
         """The same fit with d + dummy real in bands without load steps: nothing there tells the leaks' angles."""

@@ -69,10 +69,10 @@ class _Foreseen(BenchModel):
         self.scatter = fitted.scatter
         self.weights[: len(fitted.weights)] = fitted.weights
 
-    def having(self, leaks: dict[int, float], loads: npt.NDArray[np.bool_]) -> BenchModel:
-        """The same with only these leaks seen by turning the bridge, and only these bands' loads taken."""
+    def having(self, leaks: dict[int, float], loads: npt.NDArray[np.intp]) -> BenchModel:
+        """The same with only these leaks seen by turning the bridge, and only so many loads taken in each band."""
         other = copy(self)
-        other.turned_leaks, other.has_loads = leaks, loads
+        other.turned_leaks, other.load_kinds = leaks, loads
         return other
 
     def reversed_leaks(self, vector: Array) -> dict[int, float]:
@@ -223,10 +223,10 @@ class Foresight:
         leaks = self._seen_leaks | {band: self._leak(band) for band in turned}
         return self._wide.having(leaks, self._loaded(known.chosen))
 
-    def _loaded(self, chosen: tuple[int, ...]) -> npt.NDArray[np.bool_]:
-        """Which bands have load steps, with the candidates of `chosen`."""
+    def _loaded(self, chosen: tuple[int, ...]) -> npt.NDArray[np.intp]:
+        """How many loads each band has been shown, with the candidates of `chosen`."""
         loads = [self.bands[n] for n in chosen if self.candidates[n].kind == "load"]
-        return self._fitted.has_loads | np.isin(np.arange(len(self._fitted.bands)), loads)
+        return np.asarray(self._fitted.load_kinds + np.bincount(loads, minlength=len(self._fitted.bands)))
 
     def _standing(self, known: Known) -> list[tuple[Array, Array]]:
         pairs = zip(self._minima, known.covariances, strict=True)

@@ -28,6 +28,10 @@ _UNSEEN_LEAK = LEAK_SD
 _PLANE_DEVIATE = float(np.sqrt(-2.0 * np.log(0.05)))
 #: Loads have identified c where they leave less than this part of what the turned bridge left open.
 _OWN_PART = 0.6
+#: With the dummy as the fifth: balance and both parts of d and c are five unknowns, and ask for as many loads in
+#: general position (C. A. Hoer, IEEE Trans. IM-21, 466, 1972; from memory). Fewer explain themselves by leaks that are
+#: not there.
+_LEAST_LOADS = 4
 #: An angle known no better than this (its sine at the 95 % limit) counts as not known.
 _WIDEST_SINE = 0.9
 
@@ -48,11 +52,9 @@ def band_of_fit(
     seen, by_dummy = dummy_bound(model, vector, covariance, band)
     by_turning = _leak_bound(model, vector, band, match_return_loss_db)
     leaks = [_Leaks.of(model, *minimum, band, by_turning) for minimum in ((vector, covariance), *others)]
-    # Without load steps a band's leaks have no angle: their parts then mean nothing one by one.
-    by_loads = [
-        max(values) if model.has_loads[band] else np.inf for values in zip(*(x.limits for x in leaks), strict=True)
-    ]
-    identified = bool(model.has_loads[band]) and all(x.leak_identified for x in leaks)
+    enough = bool(model.load_kinds[band] >= _LEAST_LOADS)
+    by_loads = [max(values) if enough else np.inf for values in zip(*(x.limits for x in leaks), strict=True)]
+    identified = enough and all(x.leak_identified for x in leaks)
     directivity_limit, leak_limit = min(by_dummy, by_loads[0]), min(by_turning, by_loads[1])
     # Without the bridge turned a few loads explain themselves by leaks of almost any angle, and more than one.
     sure = identified and band in model.reversed_leaks(vector)
