@@ -20,19 +20,21 @@ __all__ = ["Calibration", "Shelf"]
 
 @dataclass(frozen=True, slots=True)
 class Calibration:
-    """A bridge file with the meter that reads by it and the dark count it is read with."""
+    """A bridge file with the meter that reads by it and the dark count it is read with.
+
+    outdated: what the file says of itself, worked out once, as `caution` is asked for with every reading.
+    """
 
     file: BridgeFile
     meter: Meter
     dark: DarkKeeper
+    outdated: str | None = None
 
     def caution(self, plate: Nameplate | None) -> str | None:
         """What the file itself or the board says against this calibration, in a sentence; None where nothing does."""
         file = self.file
-        if file.outdated:
-            return file.outdated
-        if plate is None:
-            return None
+        if self.outdated or plate is None:
+            return self.outdated
         if plate.bridge_file_id not in (0, file.fit_id):
             return (
                 f"the board was given fit {plate.bridge_file_id:04X}, bridge file {file.source} holds fit "
@@ -52,7 +54,9 @@ class Shelf:
     def __init__(self, files: Sequence[BridgeFile]) -> None:
         """FileError where a file has no fit, or two are for one board."""
         _demand_one_a_board(files)
-        self._all = [Calibration(file, Meter(file.calibrated()), DarkKeeper(file.calibrated())) for file in files]
+        self._all = [
+            Calibration(file, Meter(file.calibrated()), DarkKeeper(file.calibrated()), file.outdated) for file in files
+        ]
 
     def choose(self, plate: Nameplate | None, checked: bool, nameless: bool) -> tuple[Calibration | None, str | None]:
         """The calibration for a board as known now; else None and why.
