@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from calibration.bench import BenchStep
+from calibration.bench import BenchStep, step_power_w
 from calibration.bridge import Band, Bridge
 from calibration.laws import DiodeLaw, Law, LogLaw, TableLaw
 from calibration.meter import Meter
@@ -22,7 +22,7 @@ from calibration.reflection import rho_from_swr, swr_from_rho
 from calibration.units import wave_db
 from calibration.warmth import DIODES
 
-from .fitted_file import FittedFile, known_power_w
+from .fitted_file import FittedFile
 
 __all__ = ["SWRS", "Section", "interval_grid", "middle_power_w", "power_sds_db", "sections", "show_powers_w"]
 
@@ -57,7 +57,7 @@ def sections(fitted: FittedFile) -> list[Section]:
 
 def show_powers_w(fitted: FittedFile) -> list[float]:
     """The powers [W] at which intervals are told: up to three decades within those of the power steps."""
-    known = [known_power_w(s, fitted.bridge.z0_ohm) for s in fitted.file.steps if s.kind == "power"]
+    known = [step_power_w(s, fitted.bridge.z0_ohm) or math.nan for s in fitted.file.steps if s.kind == "power"]
     if not known:
         return [10.0]
     least, most = min(known) / 1.3, max(known) * 1.3
@@ -280,7 +280,7 @@ def _counted(steps: Sequence[BenchStep]) -> Iterator[str]:
 def _connected(step: BenchStep, z0_ohm: float) -> str:
     if step.kind == "load":
         return f"{step.load} {step.line_deg:g} deg" if step.line_deg else step.load or ""
-    watts = known_power_w(step, z0_ohm)
+    watts = step_power_w(step, z0_ohm) or math.nan
     return "" if math.isnan(watts) else f"{watts:.4g} W"
 
 

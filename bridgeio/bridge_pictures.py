@@ -16,6 +16,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import numpy.typing as npt
 
+from calibration.bench import step_power_w
 from calibration.bridge import band_at
 from calibration.directivity import NORMAL_DEVIATE
 from calibration.meter import Meter
@@ -25,7 +26,7 @@ from calibration.units import wave_db
 
 from .bridge_facts import interval_grid, middle_power_w, power_sds_db, show_powers_w
 from .errors import BridgeIOError
-from .fitted_file import FittedFile, known_power_w
+from .fitted_file import FittedFile
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -138,7 +139,7 @@ def _law_points(fitted: FittedFile, side: str) -> Array:
             continue
         counts = step.forward if ahead else step.reflected
         gain, there = (b.gain_forward if ahead else b.gain_reflected for b in (band, middle))
-        watts = known_power_w(step, bridge.z0_ohm)
+        watts = step_power_w(step, bridge.z0_ohm) or math.nan
         excess = 100.0 * (float(law.square(counts)) / gain**2 / watts - 1.0)
         points.append((watts * (gain / there) ** 2, counts - law.offset, excess))
     return np.array(points).reshape(-1, 3).T

@@ -12,14 +12,12 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from calibration.bench import BenchStep
 from calibration.bridge import Bridge
-from calibration.units import power_from_volts_w
 
 from .bridge_file import BridgeFile, parse_bridge_file, sheet_text
 from .errors import FileError
 
-__all__ = ["FitRecord", "FittedFile", "known_power_w", "load_fitted"]
+__all__ = ["FitRecord", "FittedFile", "load_fitted"]
 
 
 #: No detector comes near such a gain [law units per root watt], nor its inverse.
@@ -63,14 +61,6 @@ def load_fitted(path: str | Path) -> FittedFile:
             f"{path}: fit: is not whole ({type(error).__name__}: {error}); "
             f"run `bridgewright fit {quoted} -o {quoted}` to write it anew"
         ) from error
-
-
-def known_power_w(step: BenchStep, z0_ohm: float) -> float:
-    """The power [W] that a step was told, by watts or volts; NaN where it was told none."""
-    if step.power_w is not None or step.volts is None:
-        return math.nan if step.power_w is None else step.power_w
-    ohm = z0_ohm if step.dummy_ohm is None else step.dummy_ohm
-    return power_from_volts_w(step.volts, step.volts_kind or "rms", ohm)
 
 
 def _demand_gains(bridge: Bridge) -> None:

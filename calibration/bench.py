@@ -7,7 +7,9 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-__all__ = ["STEP_KINDS", "BenchRatings", "BenchStep"]
+from .units import power_from_volts_w
+
+__all__ = ["STEP_KINDS", "BenchRatings", "BenchStep", "step_power_w"]
 
 #: dark: transmitter off. power: dummy load, known power. reversed: bridge turned end for end, dummy load,
 #: known power. load: a known mismatch, power not known.
@@ -47,3 +49,10 @@ class BenchRatings:
     reference_full_scale_w: float | None = None
     dummy_return_loss_db: float = 30.0
     resistor_pct: float = 1.0
+
+
+def step_power_w(step: BenchStep, z0_ohm: float = 50.0) -> float | None:
+    """The forward power [W] that a step was told, by watts or by volts (rms unless told) across the dummy, or None."""
+    if step.power_w is not None or step.volts is None:
+        return step.power_w
+    return power_from_volts_w(step.volts, step.volts_kind or "rms", step.dummy_ohm or z0_ohm)

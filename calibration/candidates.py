@@ -14,14 +14,24 @@ from .bridge import BAND_REACH
 from .loads import load_impedance_ohm, load_reflection
 from .units import band_name
 
-__all__ = ["KEY_DOWN_S", "Candidate", "Limits", "band_words", "candidates", "first_steps", "has_enough"]
+__all__ = [
+    "CAREFUL_OPEN_W",
+    "CAREFUL_RESISTOR_W",
+    "KEY_DOWN_S",
+    "Candidate",
+    "Limits",
+    "band_words",
+    "candidates",
+    "first_steps",
+    "has_enough",
+]
 
 #: A bench step keeps the key down about this long [s]: what its heat is reckoned with (common practice).
 KEY_DOWN_S = 10.0
 #: Without `resistor_w` a known load gets no more than a small resistor stands [W].
-_CAREFUL_RESISTOR_W = 0.25
+CAREFUL_RESISTOR_W = 0.25
 #: Open and short never see more than this [W], or than the least power the transmitter has.
-_CAREFUL_OPEN_W = 1.0
+CAREFUL_OPEN_W = 1.0
 #: From this reflection magnitude on nothing takes the power.
 _ALL_RETURNED = 0.99
 #: A detector law has a scale, a load term and a gain.
@@ -59,9 +69,9 @@ class Limits:
         """The most forward power [W] towards a known load: its resistor takes what is not reflected."""
         rho = abs(complex(load_reflection(load_impedance_ohm(load), 0.0, z0_ohm=z0_ohm)))
         if rho >= _ALL_RETURNED:
-            return min(self.bridge_w, max(_CAREFUL_OPEN_W, self.power_min_w or 0.0))
+            return min(self.bridge_w, max(CAREFUL_OPEN_W, self.power_min_w or 0.0))
         if self.resistor_w is None:
-            return min(self.bridge_w, _CAREFUL_RESISTOR_W)
+            return min(self.bridge_w, CAREFUL_RESISTOR_W)
         return min(self.bridge_w, self.resistor_w / (1.0 - rho * rho))
 
 

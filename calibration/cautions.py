@@ -11,17 +11,14 @@ import math
 
 import numpy as np
 
-from .bench import BenchStep
-from .candidates import KEY_DOWN_S, Limits
+from .bench import BenchStep, step_power_w
+from .candidates import CAREFUL_OPEN_W, CAREFUL_RESISTOR_W, KEY_DOWN_S, Limits
 from .heat import DUMMY_S, taken_w
 from .loads import load_impedance_ohm, load_reflection
 from .reflection import line_voltage_v, swr_from_rho
-from .units import power_from_volts_w
 
-__all__ = ["CAREFUL_OPEN_W", "CAREFUL_RESISTOR_W", "cautions", "highest_v", "refusal", "step_power_w"]
+__all__ = ["cautions", "highest_v", "refusal"]
 
-#: Open and short see no more than this [W], or the least power of the transmitter; a resistor without rating this [W].
-CAREFUL_OPEN_W, CAREFUL_RESISTOR_W = 1.0, 0.25
 #: From this voltage on it is named on a matched line too [V rms] (common practice for touch).
 _HIGH_V = 50.0
 #: From this reflection magnitude on all power is taken as returned.
@@ -72,15 +69,6 @@ def refusal(step: BenchStep, limits: Limits, *, z0_ohm: float = 50.0) -> str | N
     if limits.dummy_w is not None or limits.dummy_j is not None:
         return _dummy_refusal(watts, limits)
     return None
-
-
-def step_power_w(step: BenchStep, z0_ohm: float = 50.0) -> float | None:
-    """The forward power [W] that `step` names, by watts or by volts across the dummy load; None where by neither."""
-    if step.power_w is not None:
-        return step.power_w
-    if step.volts is None or step.volts_kind is None:
-        return None
-    return power_from_volts_w(step.volts, step.volts_kind, step.dummy_ohm or z0_ohm)
 
 
 def highest_v(forward_w: float, rho: float, z0_ohm: float = 50.0) -> float:

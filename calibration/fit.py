@@ -10,7 +10,7 @@ from functools import partial
 
 import numpy as np
 
-from .bench import BenchRatings, BenchStep
+from .bench import BenchRatings, BenchStep, step_power_w
 from .bridge import Bridge
 from .fit_demands import demand_power_in_bands, demand_usable, demand_whole, enough_without
 from .fit_model import BenchModel
@@ -21,7 +21,6 @@ from .laws import LAWS
 from .leak_limits import band_of_fit, with_neighbours
 from .loads import LoadPart, load_impedance_ohm
 from .slips import Slip, evident, refuse_turned, without_slips
-from .units import power_from_volts_w
 from .warmth import DiodeKind
 
 __all__ = ["Fit", "LoadFound", "Slip", "Solution", "StepResidual", "fit", "scatter_of", "solve"]
@@ -92,7 +91,7 @@ def fit(
     SheetError where the steps cannot carry a fit at all, UnitError where a load cannot be read.
     """
     ratings = ratings or BenchRatings()
-    usable = [_with_power(step, z0_ohm) for step in steps]
+    usable = [replace(step, power_w=step_power_w(step, z0_ohm)) for step in steps]
     celsius = [step.temperature_c for step in steps]
     main = main_steps(usable) if detector == "diode" else None
     warmth = None
@@ -168,14 +167,6 @@ def _solved(
     demand_power_in_bands(model)
     model, solution, others = without_slips(make, model, first_minimum(model, seed), partial(enough_without, model))
     return model, solution, [*slips, *others]
-
-
-def _with_power(step: BenchStep, z0_ohm: float) -> BenchStep:
-    """The step with its power worked out where volts across the dummy were given."""
-    if step.power_w is not None or step.volts is None:
-        return step
-    ohm = z0_ohm if step.dummy_ohm is None else step.dummy_ohm
-    return replace(step, power_w=power_from_volts_w(step.volts, step.volts_kind or "rms", ohm))
 
 
 def _loads(model: BenchModel, solution: Solution) -> tuple[LoadFound, ...]:

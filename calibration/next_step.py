@@ -12,9 +12,8 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 import numpy.typing as npt
 
-from .bench import BenchRatings, BenchStep
+from .bench import BenchRatings, BenchStep, step_power_w
 from .candidates import Candidate, Limits, band_words, candidates, first_steps, has_enough
-from .cautions import step_power_w
 from .errors import SheetError
 from .fit_model import BenchModel
 from .fit_search import Solution, solve

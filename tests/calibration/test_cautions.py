@@ -4,9 +4,9 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from calibration.bench import BenchStep
+from calibration.bench import BenchStep, step_power_w
 from calibration.candidates import Limits
-from calibration.cautions import cautions, highest_v, refusal, step_power_w
+from calibration.cautions import cautions, highest_v, refusal
 
 LIMITS = Limits(dummy_w=100.0, resistor_w=2.0, power_min_w=0.5, power_max_w=100.0, max_w=150.0)
 
@@ -45,6 +45,7 @@ def test_power_of_a_step_may_be_told_in_volts():
     """15.8 V rms across 50 ohm are 5 W; a peak value is half of that; nothing told is nothing known."""
     assert step_power_w(step(volts=15.8114, volts_kind="rms")) == pytest.approx(5.0, rel=1e-4)
     assert step_power_w(step(volts=15.8114, volts_kind="peak")) == pytest.approx(2.5, rel=1e-4)
+    assert step_power_w(step(volts=15.8114)) == pytest.approx(5.0, rel=1e-4)
     assert step_power_w(step()) is None
 
 

@@ -11,9 +11,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from calibration.bench import BenchStep
+from calibration.bench import BenchStep, step_power_w
 from calibration.candidates import Candidate
-from calibration.cautions import step_power_w
 from calibration.fit import Fit
 
 __all__ = ["LawPicture", "law_picture"]
