@@ -147,12 +147,14 @@ def test_put_does_not_wait_while_the_disk_does(tmp_path, fault):
     path = tmp_path / "a.journal"
     writer = Writer(path, STRETCH, book=fault)
     fault.free.clear()
-    longest_s = 0.0
+    took_s = []
     for k in range(1000):
         began_s = time.perf_counter()
         assert writer.put([some(10 * k)], START_S + k / 100)
-        longest_s = max(longest_s, time.perf_counter() - began_s)
-    assert longest_s < 0.2
+        took_s.append(time.perf_counter() - began_s)
+    # All are taken and the disk is still held up. A busy machine may stop us ourselves for a while, once or twice.
+    assert not fault.free.is_set()
+    assert sorted(took_s)[990] < 0.02
     fault.free.set()
     assert writer.stop()
     assert times(path) == list(range(10_000))
